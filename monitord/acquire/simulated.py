@@ -1,0 +1,93 @@
+"""The built-in station: transmitters with programme, drift and a story, in the noise of one receiver.
+
+It paces itself by the monotonic clock and hands over blocks of 50 ms, like a receiver would. The samples
+depend on the settings alone: every start gives the same ones.
+"""
+
+import time
+from collections.abc import Sequence
+
+from monitord.acquire.transmitters import Air
+from monitord.blocks import Block
+from monitord.errors import SourceLost
+from monitord.settings import Channel, Source
+from monitord.stage import SourceCounts
+
+BLOCK_S = 0.05
+STATION_RATE_HZ = 48_000.0
+
+
+def builtin_channels() -> tuple[Channel, ...]:
+    """The channels of the station when the settings name none: three, with nominal carriers round 0 Hz."""
+    return (
+        Channel(name="alder", carrier_hz=-14_000.0),
+        Channel(name="birch", carrier_hz=-1_000.0),
+        Channel(name="cedar", carrier_hz=13_000.0),
+    )
+
+
+class SimulatedSource:
+    """A SampleSource with one transmitter on each carrier of `channels`.
+
+    Complex samples at `settings.sample_rate_hz` (48 kS/s unless set) round `settings.center_hz`. Two channels
+    on one carrier hear the same transmitter. With `settings.pace = "flat-out"` it does not wait. It never
+    ends.
+    """
+
+    def __init__(self, settings: Source, channels: Sequence[Channel]) -> None:
+        self.settings = settings
+        self.counts = SourceCounts()
+        self._channels = tuple(channels)
+        self._rate_hz = float(settings.sample_rate_hz or STATION_RATE_HZ)
+        self._center_hz = float(settings.center_hz or 0.0)
+        self._frames = max(1, round(BLOCK_S * self._rate_hz))
+        self._air: Air | None = None
+        self._openings = 0
+        self._began_s = self._began_utc = 0.0
+
+    @property
+    def ended(self) -> bool:
+        """Never: the station is on the air around the clock."""
+        return False
+
+    def open(self) -> None:
+        """Make the programmes, which takes about half a second, and go on the air.
+
+        Opened again, it is a new stream.
+        """
+        self._air = Air(self._channels, self._rate_hz, self._center_hz)
+        self._openings += 1
+        self._began_s, self._began_utc = time.monotonic(), time.time()
+
+    def read(self, timeout_s: float) -> Block | None:
+        """Hand over the next 50 ms once they are over, or None if they are not within `timeout_s` seconds.
+
+        A late reader gets all that is due, without loss. Raises SourceLost if the source is not open.
+        """
+        air = self._air
+        if air is None:
+            raise SourceLost("source: the simulated station is not open; open it before reading")
+        if not self._due(air.next + self._frames, timeout_s):
+            return None
+        start = air.next
+        return Block(
+            samples=air.receive(self._frames),
+            rate_hz=self._rate_hz,
+            center_hz=self._center_hz,
+            start=start,
+            utc=self._began_utc + start / self._rate_hz,
+            stream=self._openings - 1,
+        )
+
+    def close(self) -> None:
+        """Let go of the programmes; may be called twice."""
+        self._air = None
+
+    def _due(self, end: int, timeout_s: float) -> bool:
+        """Wait until sample `end` would have come, at most `timeout_s`; whether it has."""
+        if self.settings.pace == "flat-out":
+            return True
+        wait_s = self._began_s + end / self._rate_hz - time.monotonic()
+        if wait_s > 0:
+            time.sleep(max(0.0, min(wait_s, timeout_s)))
+        return wait_s <= timeout_s

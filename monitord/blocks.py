@@ -1,0 +1,214 @@
+"""The types that travel from stage to stage.
+
+Arrays handed on are read-only by agreement: a stage never writes into what it was given.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from enum import IntFlag
+
+import numpy as np
+from numpy.typing import NDArray
+
+Complex = NDArray[np.complex64]
+Real = NDArray[np.float32]
+Precise = NDArray[np.float64]
+Flags = NDArray[np.bool_]
+
+
+class Fault(IntFlag):
+    """Why a reading is not to be trusted. The names on the page are `fault_names(...)`."""
+
+    UNLOCKED = 1
+    WEAK_SIGNAL = 2
+    FADING = 4
+    INTERFERENCE = 8
+    SOURCE_GAP = 16
+    CLIPPING = 32
+    SETTLING = 64
+    BAND_LIMITED = 128
+    QUADRATURE_SIGNAL = 256
+    GAIN_CHANGED = 512
+
+
+FAULT_NAMES: Mapping[Fault, str] = {fault: str(fault.name).lower().replace("_", "-") for fault in Fault}
+
+
+def fault_names(bits: int) -> tuple[str, ...]:
+    """Names of the faults set in `bits`, as they stand on the page and in the replay output."""
+    return tuple(name for fault, name in FAULT_NAMES.items() if bits & fault)
+
+
+@dataclass(frozen=True, slots=True)
+class Block:
+    """Samples as they came.
+
+    samples: complex64 (IQ) or float32 (real IF), shape (frames,); 0 dBFS is an amplitude of 1.0.
+    rate_hz: samples per second.
+    center_hz: the frequency that 0 Hz of the samples stands for.
+    start: index of the first sample since the stream began; lost samples are counted in it.
+    utc: UTC of the first sample, seconds since 1970, or None where the recording does not say.
+    lost, lost_reason: frames lost just before the block, and why ("" when none).
+    clipped: how many samples stood at full scale.
+    stream: number of the stream; another number means that counting began anew (a reconnect).
+    """
+
+    samples: Complex | Real
+    rate_hz: float
+    center_hz: float
+    start: int
+    utc: float | None
+    lost: int = 0
+    lost_reason: str = ""
+    clipped: int = 0
+    stream: int = 0
+
+    @property
+    def end(self) -> int:
+        """Index of the sample after the last."""
+        return self.start + len(self.samples)
+
+
+@dataclass(frozen=True, slots=True)
+class Span:
+    """The stretch of the source that one hop stands for.
+
+    index: number of the hop on the grid that began with the stream (lost hops are counted).
+    start, end: samples [start, end) of the source.
+    rate_hz: of the source.
+    utc: UTC of `end`, seconds since 1970, or None.
+    fresh: the first hop after the beginning or after a gap.
+    clipped: samples of the source at full scale among those that came with this hop.
+    stream: number of the stream, as in Block.
+    """
+
+    index: int
+    start: int
+    end: int
+    rate_hz: float
+    utc: float | None
+    fresh: bool = False
+    clipped: int = 0
+    stream: int = 0
+
+    @property
+    def elapsed_s(self) -> float:
+        """Seconds from the beginning of the stream to the end of the hop."""
+        return self.end / self.rate_hz
+
+
+@dataclass(frozen=True, slots=True)
+class Baseband:
+    """One hop of one bank: complex64 (channels, frames), each nominal carrier at 0 Hz."""
+
+    samples: Complex
+    rate_hz: float
+    span: Span
+
+
+@dataclass(frozen=True, slots=True)
+class Detected:
+    """One hop of one bank, detected.
+
+    in_phase, quadrature: float32 (channels, frames), the carrier scaled to 1; NaN rows where there is no carrier.
+    amplitude: carrier amplitude (channels,), full scale = 1; NaN where there is no carrier.
+    hop_amplitude: amplitude of the carrier in this hop alone (channels,), never NaN.
+    noise_density: reception noise of this hop, power per Hz re full scale (channels,).
+    sigma: standard deviation of the reception noise in `in_phase`, carrier = 1 (channels,).
+    phase: carrier phase less that of the nominal carrier, rad, unwrapped while locked, float64
+        (channels, steps), at the middle of `steps` equal parts of the hop.
+    offset_hz: carrier frequency less the nominal one, as the loop holds it (channels,).
+    searched: enough has been heard to say whether there is a carrier (channels,).
+    locked: the carrier loop holds a carrier (channels,).
+    settled: locked, and the carrier's average is full (channels,).
+    broken: the carrier was interrupted within this hop (channels,).
+    """
+
+    in_phase: Real
+    quadrature: Real
+    rate_hz: float
+    span: Span
+    amplitude: Precise
+    hop_amplitude: Precise
+    noise_density: Precise
+    sigma: Precise
+    phase: Precise
+    offset_hz: Precise
+    searched: Flags
+    locked: Flags
+    settled: Flags
+    broken: Flags
+
+
+@dataclass(frozen=True, slots=True)
+class Moment:
+    """One hop of all channels, for the rules that must tell within 0.3 s. All arrays (channels,).
+
+    level_dbfs: carrier level of this hop; -inf where there is none.
+    present: 1 the carrier is there, 0 it is not, -1 not known yet.
+    locked, settled: as in Detected.
+    positive_peak, negative_peak: true peaks of this hop as ratios; NaN where there is none.
+    over_positive_s, over_negative_s: seconds of this hop beyond the limit.
+    over_positive_span_s, over_negative_span_s: first and last time beyond it, seconds since the stream began,
+        (channels, 2), NaN where there is none.
+    cut_off: the negative excursion is a cut-off and no reversal.
+    faults: bits of Fault.
+    """
+
+    channels: tuple[str, ...]
+    span: Span
+    level_dbfs: Precise
+    present: NDArray[np.int8]
+    locked: Flags
+    settled: Flags
+    positive_peak: Precise
+    negative_peak: Precise
+    over_positive_s: Precise
+    over_negative_s: Precise
+    over_positive_span_s: Precise
+    over_negative_span_s: Precise
+    cut_off: Flags
+    faults: NDArray[np.uint32]
+
+
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """One interval of whole hops, all quantities of all channels.
+
+    values: quantity name without prefix -> float64 (channels,), or (channels, labels) where the quantity has a
+        second label; NaN where there is nothing valid to say.
+    valid: no fault stands against the reading (channels,).
+    faults: bits of Fault (channels,).
+    span: [start, end) in samples, with the UTC of its end.
+    """
+
+    channels: tuple[str, ...]
+    span: Span
+    values: Mapping[str, Precise]
+    valid: Flags
+    faults: NDArray[np.uint32]
+
+
+@dataclass(frozen=True, slots=True)
+class Event:
+    """Something that began and perhaps ended. It is told twice: when it opens, and (`ended_s` set) when it closes.
+
+    id: unique within the process.
+    kind: one of the event kinds.
+    channel: its channel, or None for the source and the daemon.
+    started_s, ended_s: seconds since the stream began.
+    started_utc, ended_utc: the same as UTC, seconds since 1970, or None where time is not known.
+    extreme: the worst value met, in the unit of `limit`; NaN where there is none.
+    detail: more in a word, "reversal" or "cut-off" for instance.
+    """
+
+    id: int
+    kind: str
+    channel: str | None
+    started_s: float
+    started_utc: float | None
+    ended_s: float | None = None
+    ended_utc: float | None = None
+    extreme: float = float("nan")
+    limit: float = float("nan")
+    detail: str = ""

@@ -1,0 +1,1 @@
+"""From the source's samples to one baseband row per channel."""

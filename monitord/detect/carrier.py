@@ -1,0 +1,199 @@
+"""Carrier recovery, common to the detectors: find the line, follow its phase, say honestly when it is lost.
+
+Each hop: rotate by the phase predicted at the hop's beginning, average to a few hundred steps a second, run
+the loop over the steps, and rotate the samples by the phase that the loop found. The phase error is taken
+from quadrature over the *mean* carrier, so that bass and over-modulation do not upset it.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from monitord.blocks import Baseband, Complex, Flags, Precise, Span
+from monitord.condition.grid import STEPS
+from monitord.detect.averaging import TaperedMean
+from monitord.detect.loop import CarrierLoop
+from monitord.detect.noise import QuadratureNoise, with_floor
+from monitord.detect.search import LineSearch
+from monitord.stage import Bank
+
+_LOCK_BELOW_PRESENT_DB = 3.0  # the loop may hold a carrier somewhat weaker than one that counts as present
+_CONFIRMED_AFTER = 2  # hops that must show the line before the loop calls itself locked, and to give it up
+_BREAK_STEPS = 5  # 20 ms at less than a tenth: longer than any trough of programme, so the carrier was cut
+_BREAK_BELOW = 0.1
+_NOISE_SMOOTHING = 0.2
+_MOST_ANGLE = 1.0
+
+
+@dataclass(frozen=True, slots=True)
+class Carrier:
+    """One hop with its carriers recovered.
+
+    samples: baseband with each carrier turned to phase 0, complex64 (channels, frames), full scale = 1.
+    The other fields are those of Detected.
+    """
+
+    samples: Complex
+    rate_hz: float
+    span: Span
+    amplitude: Precise
+    hop_amplitude: Precise
+    noise_density: Precise
+    sigma: Precise
+    phase: Precise
+    offset_hz: Precise
+    searched: Flags
+    locked: Flags
+    settled: Flags
+    broken: Flags
+
+
+class CarrierRecovery:
+    """Recovers the carriers of one bank."""
+
+    def __init__(self, bank: Bank) -> None:
+        first = bank.channels[0]
+        rate_hz, frames = bank.rate_hz, bank.frames
+        self._channels = len(bank.channels)
+        self._rate_hz = rate_hz
+        self._frames = frames
+        self._hop_s = bank.hop_s
+        self._acquire_hz = first.acquire_hz
+        self._pass_hz = first.bandwidth_hz + first.acquire_hz
+        self._noise_hz = bank.noise_hz
+        self._average_hops = max(1, round(first.carrier_average_s / self._hop_s))
+        self._enough = 10 ** (
+            (np.array([channel.present_c_n0_dbhz for channel in bank.channels]) - _LOCK_BELOW_PRESENT_DB) / 10
+        )
+        self._loop = CarrierLoop(first.loop_bandwidth_hz, STEPS, self._hop_s / STEPS)
+        self._noise = QuadratureNoise(rate_hz, frames, self._pass_hz)
+        self._step_start_s = np.arange(STEPS + 1) * self._hop_s / STEPS
+        self._within_step = np.arange(frames // STEPS, dtype=np.float32)
+        self.reset()
+
+    def reset(self) -> None:
+        """Forget everything: as new."""
+        count = self._channels
+        self._search = LineSearch(count, self._rate_hz, self._frames, STEPS, self._acquire_hz)
+        self._mean = TaperedMean(count, self._frames, self._average_hops)
+        self._phase = np.zeros(count)
+        self._speed = np.zeros(count)  # rad/s
+        self._amplitude = np.zeros(count)  # of the last hops, for the loop
+        self._tracking = np.zeros(count, bool)
+        self._good = np.zeros(count, np.int64)
+        self._bad = np.zeros(count, np.int64)
+        self._age = np.zeros(count, np.int64)
+        self._low_run = np.zeros(count, np.int64)
+        self._smooth_noise = np.full(count, np.nan)
+
+    def process(self, baseband: Baseband) -> Carrier:
+        """Recover the carriers of one hop."""
+        steps = self._averaged_steps(baseband.samples)
+        path, speed_change = self._loop.follow(self._angles(steps))
+        samples, phase = self._rotate(baseband.samples, path)
+        steps *= np.exp(-1j * (path[:, :-1] + path[:, 1:]) / 2)
+        line = steps.mean(axis=1)
+        noise = with_floor(self._noise.density(samples.imag), np.abs(line))
+        broken = self._breaks(steps.real)
+        self._judge(line, noise)
+        self._average(samples, broken)
+        self._advance(path[:, -1], speed_change, line)
+        locked = self._tracking & (self._good >= _CONFIRMED_AFTER)
+        settled = locked & (self._age > self._average_hops) & (self._mean.filled > 0.5)
+        amplitude = np.where(locked, self._mean.mean, np.nan)
+        sigma = np.sqrt(np.fmax(noise, self._smooth_noise) * self._noise_hz) / amplitude
+        carrier = Carrier(
+            samples=samples,
+            rate_hz=self._rate_hz,
+            span=baseband.span,
+            amplitude=amplitude,
+            hop_amplitude=np.where(self._tracking, np.abs(line), 0.0),
+            noise_density=noise,
+            sigma=sigma,
+            phase=phase + steps.imag / np.where(self._amplitude > 0, self._amplitude, 1)[:, None],
+            offset_hz=np.where(locked, self._speed / (2 * np.pi), np.nan),
+            searched=self._tracking | self._search.ready,
+            locked=locked,
+            settled=settled,
+            broken=broken,
+        )
+        self._seek(baseband.samples)
+        return carrier
+
+    def _averaged_steps(self, samples: Complex) -> Precise:
+        """The hop turned by the predicted phase and averaged over each step, complex128 (channels, STEPS)."""
+        turn = np.exp(-1j * (self._speed / self._rate_hz)[:, None] * self._within_step).astype(np.complex64)
+        parts = samples.reshape(self._channels, STEPS, -1)
+        sums = np.matmul(parts, turn[:, :, None])[:, :, 0] / self._within_step.size
+        predicted = self._phase[:, None] + self._speed[:, None] * self._step_start_s[:-1]
+        return sums * np.exp(-1j * predicted)
+
+    def _angles(self, steps: Precise) -> Precise:
+        """Phase errors for the loop; none where nothing is tracked or the line has just gone (it coasts)."""
+        use = self._tracking & (self._bad == 0)
+        scale = np.divide(1.0, self._amplitude, out=np.zeros(self._channels), where=use & (self._amplitude > 0))
+        return np.clip(steps.imag * scale[:, None], -_MOST_ANGLE, _MOST_ANGLE)
+
+    def _rotate(self, samples: Complex, path: Precise) -> tuple[Complex, Precise]:
+        """Turn the samples to phase 0; also the phases at the steps' middles, float64 (channels, STEPS)."""
+        edge = self._phase[:, None] + self._speed[:, None] * self._step_start_s + path
+        slope = np.diff(edge, axis=1) / self._within_step.size
+        start = np.remainder(edge[:, :-1], 2 * np.pi)
+        angle = slope.astype(np.float32)[:, :, None] * self._within_step
+        angle += start.astype(np.float32)[:, :, None]
+        turn = np.empty(angle.shape, np.complex64)
+        np.cos(angle, out=turn.real)
+        np.sin(angle, out=turn.imag)
+        np.conj(turn, out=turn)
+        turn *= samples.reshape(angle.shape)
+        return turn.reshape(samples.shape), (edge[:, :-1] + edge[:, 1:]) / 2
+
+    def _breaks(self, steps: Precise) -> Flags:
+        """Rows whose carrier was cut within this hop, counting a cut that began in the hop before."""
+        low = steps < _BREAK_BELOW * np.where(np.isfinite(self._mean.mean), self._mean.mean, 0)[:, None]
+        place = np.arange(1, STEPS + 1)
+        last_high = np.maximum.accumulate(np.where(low, 0, place), axis=1)
+        run = np.where(last_high == 0, place + self._low_run[:, None], place - last_high) * low
+        self._low_run = run[:, -1]
+        return np.asarray(run.max(axis=1) >= _BREAK_STEPS)
+
+    def _judge(self, line: Precise, noise: Precise) -> None:
+        """Count the hops that showed the line, and those that did not; give up after two of these."""
+        power = np.square(np.abs(line))
+        shown = (power - noise / self._hop_s > self._enough * noise) & (line.real > 0.5 * np.abs(line))
+        self._good = np.where(self._tracking & shown, self._good + 1, 0)
+        self._bad = np.where(self._tracking & ~shown, self._bad + 1, 0)
+        away = np.abs(self._speed) / (2 * np.pi) > 1.05 * self._acquire_hz + 2
+        lost = self._tracking & ((self._bad >= _CONFIRMED_AFTER) | away)
+        self._tracking = self._tracking & ~lost
+        self._mean.forget(lost)
+        self._age = np.where(self._tracking, self._age + 1, 0)
+        smooth = self._smooth_noise + _NOISE_SMOOTHING * (noise - self._smooth_noise)
+        self._smooth_noise = np.where(np.isfinite(smooth), smooth, noise)
+
+    def _average(self, samples: Complex, broken: Flags) -> None:
+        self._mean.take(samples.real, self._tracking & (self._bad == 0) & ~broken)
+
+    def _advance(self, path_end: Precise, speed_change: Precise, line: Precise) -> None:
+        """Carry phase, frequency and amplitude over to the next hop."""
+        self._phase = self._phase + self._speed * self._hop_s + path_end
+        self._speed = self._speed + speed_change
+        fresh = self._amplitude + 0.3 * (np.abs(line) - self._amplitude)
+        self._amplitude = np.where(self._good > 0, fresh, self._amplitude)
+
+    def _seek(self, samples: Complex) -> None:
+        """Search where nothing is tracked; what is found is tracked from the next hop on."""
+        self._search.listen(samples, ~self._tracking | (self._bad > 0))
+        rows = ~self._tracking & self._search.ready
+        if not rows.any():
+            return
+        line = self._search.find(rows)
+        new = np.zeros(self._channels, bool)
+        new[rows] = line.found
+        self._phase[new] = line.phase[line.found]
+        self._speed[new] = 2 * np.pi * line.offset_hz[line.found]
+        self._amplitude[new] = line.amplitude[line.found]
+        self._tracking = self._tracking | new
+        self._good[new] = 0
+        self._bad[new] = 0
+        self._age[new] = 0

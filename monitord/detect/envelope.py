@@ -1,0 +1,30 @@
+"""Envelope detector: the magnitude. It folds where the carrier reverses, and distorts where a sideband is missing.
+
+The carrier is recovered all the same: level, frequency and noise come from it, and it is what depth refers to.
+"""
+
+import numpy as np
+
+from monitord.blocks import Baseband, Detected
+from monitord.detect.carrier import CarrierRecovery
+from monitord.detect.synchronous import scaled
+from monitord.stage import Bank
+
+
+class EnvelopeDetector:
+    """Magnitude of the baseband, in units of the carrier."""
+
+    delay_s = 0.0
+
+    def prepare(self, bank: Bank) -> None:
+        """See stage.Detector."""
+        self._recovery = CarrierRecovery(bank)
+
+    def process(self, baseband: Baseband) -> Detected:
+        """See stage.Detector."""
+        carrier = self._recovery.process(baseband)
+        return scaled(carrier, np.abs(baseband.samples))
+
+    def reset(self) -> None:
+        """See stage.Detector."""
+        self._recovery.reset()

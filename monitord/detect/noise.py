@@ -1,0 +1,40 @@
+"""Reception noise from the quadrature channel.
+
+With the carrier recovered, programme is in phase only; what is left in quadrature, more than 100 Hz from
+the carrier, has the density of the reception noise. The median over the bins is deaf to lines.
+"""
+
+import numpy as np
+import scipy.fft
+
+from monitord.blocks import Precise, Real
+
+_CLEAR_OF_CARRIER_HZ = 100.0
+_FLOAT32_FLOOR = 1e-16  # density re carrier power below which only single-precision rounding is measured
+
+
+class QuadratureNoise:
+    """Noise density of each row of quadrature, per hop."""
+
+    def __init__(self, rate_hz: float, frames: int, pass_hz: float) -> None:
+        self._window = np.hanning(frames).astype(np.float32)
+        bin_hz = rate_hz / frames
+        lowest = min(_CLEAR_OF_CARRIER_HZ, 0.4 * pass_hz)
+        self._bins = slice(int(np.ceil(lowest / bin_hz)) + 2, max(int(pass_hz / bin_hz), 4) + 1)
+        # Quadrature alone has half the complex density; the median of an exponential is ln 2 of its mean.
+        power = float(np.sum(np.square(self._window, dtype=np.float64)))
+        self._scale = 2 / (rate_hz * power * np.log(2))
+
+    def density(self, quadrature: Real) -> Precise:
+        """Power per Hz of the complex baseband, full scale = 1, float64 (channels,).
+
+        quadrature: float32 (channels, frames), full scale = 1.
+        """
+        spectrum = scipy.fft.rfft(quadrature * self._window, axis=1)[:, self._bins]
+        power = np.square(spectrum.real) + np.square(spectrum.imag)
+        return np.asarray(np.median(power, axis=1) * self._scale, np.float64)
+
+
+def with_floor(density: Precise, amplitude: Precise) -> Precise:
+    """The density, not below what arithmetic in single precision can tell from zero."""
+    return np.maximum(density, _FLOAT32_FLOOR * np.square(amplitude) + 1e-30)

@@ -1,0 +1,125 @@
+"""Modulation: true peaks over a window, frequently recurring peaks, rms."""
+
+from collections.abc import Mapping
+
+import numpy as np
+
+from monitord.blocks import Detected, Flags, Precise
+from monitord.measure.truepeak import TruePeaks
+from monitord.measure.validity import peaks_mean_something
+from monitord.quantities import Quantity
+from monitord.stage import Bank
+
+WINDOW_S = 10.0
+RECURRING_WINDOW_S = 60.0
+RECURRING_RANK = 10  # common practice: how many make "frequently recurring"
+_RECURRING_SHARE = 0.9
+
+
+class ModulationMeter:
+    """m(t) = in-phase / carrier - 1; positive peak max m, negative peak -min m (47 CFR 73.14; CHECKS A2)."""
+
+    quantities = (
+        Quantity(
+            "modulation_positive_peak_ratio",
+            "",
+            "Largest positive true peak of the modulation in the last 10 s.",
+            "47 CFR 73.14",
+            trusted_only=True,
+        ),
+        Quantity(
+            "modulation_negative_peak_ratio",
+            "",
+            "Largest negative true peak of the modulation in the last 10 s.",
+            "47 CFR 73.14",
+            trusted_only=True,
+        ),
+        Quantity(
+            "modulation_recurring_positive_peak_ratio",
+            "",
+            "Frequently recurring positive peak: 10th largest of the 100 ms maxima of 60 s.",
+            "47 CFR 73.1570; rank: common practice",
+            trusted_only=True,
+        ),
+        Quantity(
+            "modulation_recurring_negative_peak_ratio",
+            "",
+            "Frequently recurring negative peak: 10th largest of the 100 ms maxima of 60 s.",
+            "47 CFR 73.1570; rank: common practice",
+            trusted_only=True,
+        ),
+        Quantity(
+            "modulation_rms_ratio",
+            "",
+            "Rms of the modulation over the interval, reception noise subtracted.",
+            "DESIGN 4",
+            trusted_only=True,
+        ),
+    )
+
+    def prepare(self, bank: Bank) -> None:
+        """See stage.Meter."""
+        self._bank = bank
+        self._window = round(WINDOW_S / bank.hop_s)
+        self._slots = round(RECURRING_WINDOW_S / bank.hop_s)
+        self.reset()
+
+    def reset(self) -> None:
+        """See stage.Meter."""
+        count = len(self._bank.channels)
+        self._true = TruePeaks(count, self._bank.frames)
+        self._peaks = np.full((self._slots, 2, count), np.nan)  # newest last
+        self._valid_hops = np.zeros(count, np.int64)
+        self._begin()
+
+    def _begin(self) -> None:
+        count = len(self._bank.channels)
+        self._square = np.zeros(count)
+        self._square_hops = np.zeros(count)
+
+    def process(self, detected: Detected) -> Mapping[str, Precise]:
+        """See stage.Meter."""
+        wave = self._true.fresh
+        np.subtract(detected.in_phase, 1, out=wave)
+        highest, lowest = self._true.find()
+        usable = detected.settled & ~detected.broken
+        peaks = np.where(usable & peaks_mean_something(detected, self._bank), [highest, -lowest], np.nan)
+        self._remember(peaks, detected.broken)
+        square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - np.square(detected.sigma)
+        self._square += np.where(usable, square, 0)
+        self._square_hops += usable
+        self._true.advance()
+        return {"positive_peak": peaks[0], "negative_peak": peaks[1]}
+
+    def _remember(self, peaks: Precise, broken: Flags) -> None:
+        self._peaks = np.roll(self._peaks, -1, axis=0)
+        self._peaks[-1] = peaks
+        # A cut is known for sure only in the hop after the one in which it began.
+        self._peaks[-2, :, broken] = np.nan
+        self._valid_hops += np.isfinite(peaks[0])
+
+    def reading(self) -> Mapping[str, Precise]:
+        """See stage.Meter."""
+        positive, negative = np.fmax.reduce(self._peaks[-self._window :], axis=0)
+        recurring = self._recurring()
+        mean = np.divide(
+            self._square, self._square_hops, out=np.full(len(positive), np.nan), where=self._square_hops > 0
+        )
+        self._begin()
+        return {
+            "modulation_positive_peak_ratio": positive,
+            "modulation_negative_peak_ratio": negative,
+            "modulation_recurring_positive_peak_ratio": recurring[0],
+            "modulation_recurring_negative_peak_ratio": recurring[1],
+            "modulation_rms_ratio": np.sqrt(np.maximum(mean, 0)),
+        }
+
+    def _recurring(self) -> Precise:
+        """The 10th largest slot of the window, (2, channels); NaN until the window's time has been valid."""
+        enough = np.isfinite(self._peaks[:, 0]).sum(axis=0) >= _RECURRING_SHARE * self._slots
+        ready = enough & (self._valid_hops >= self._slots)
+        if not ready.any():
+            return np.full(self._peaks.shape[1:], np.nan)
+        slots = np.where(np.isfinite(self._peaks), self._peaks, -np.inf)
+        ranked = np.partition(slots, -RECURRING_RANK, axis=0)[-RECURRING_RANK]
+        return np.where(ready, ranked, np.nan)

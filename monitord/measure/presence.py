@@ -1,0 +1,111 @@
+"""Is the carrier there? A line with enough C/N0 and, where the receiver's gain is fixed, near its usual level.
+
+The usual level is the one in the settings, or is learned: the mean power of the first 10 s of steady carrier.
+What was learned stays for the life of the process, across gaps of the source.
+"""
+
+import logging
+
+import numpy as np
+from numpy.typing import NDArray
+
+from monitord.blocks import Detected, Flags, Precise
+from monitord.stage import Bank
+
+LEARN_S = 10.0
+_JUDGE_AFTER_S = 1.0  # from a fresh start: a weak carrier may need a second search
+_RETURN_S = 0.3
+_HYSTERESIS_DB = 1.0
+
+_log = logging.getLogger("monitord.carrier")
+
+
+class ReferenceLevel:
+    """The reference level of each channel of a bank, given or learned."""
+
+    def __init__(self, bank: Bank) -> None:
+        self._bank = bank
+        given = [channel.reference_level_dbfs for channel in bank.channels]
+        self.given = np.array([np.nan if level is None else level for level in given])
+        self._hops_wanted = round(LEARN_S / bank.hop_s)
+        self.reset()
+
+    def reset(self) -> None:
+        """Forget what is being learned; what has been learned stays in the bank's table."""
+        learned = self._bank.learned_levels
+        known = np.array([learned.get(channel.name, np.nan) for channel in self._bank.channels])
+        self.level_dbfs = np.where(np.isfinite(self.given), self.given, known)
+        self._power = np.zeros(len(known))
+        self._hops = np.zeros(len(known), np.int64)
+
+    @property
+    def working_dbfs(self) -> Precise:
+        """The reference, or while it is still being learned, the mean so far; NaN where there is none."""
+        return np.where(np.isfinite(self.level_dbfs), self.level_dbfs, self._so_far())
+
+    def learn(self, amplitude: Precise, steady: Flags) -> None:
+        """Take the carriers' amplitudes of one hop, where they are steady."""
+        learning = steady & ~np.isfinite(self.level_dbfs)
+        if not learning.any():
+            return
+        self._power[learning] += np.square(amplitude[learning])
+        self._hops[learning] += 1
+        for row in np.flatnonzero(learning & (self._hops >= self._hops_wanted)):
+            self._keep(int(row))
+
+    def _so_far(self) -> Precise:
+        mean = np.divide(self._power, self._hops, out=np.full(len(self._hops), np.nan), where=self._hops > 0)
+        return np.asarray(10 * np.log10(mean))
+
+    def _keep(self, row: int) -> None:
+        name, level = self._bank.channels[row].name, float(self._so_far()[row])
+        self.level_dbfs[row] = level
+        self._bank.learned_levels[name] = level
+        _log.info("%s: reference level learned: %.2f dBFS (reference_level_dbfs is not set)", name, level)
+
+
+class Presence:
+    """Judges presence hop by hop: 1 there, 0 lost (for `loss_after_s`), -1 not known yet."""
+
+    def __init__(self, bank: Bank) -> None:
+        self.reference = ReferenceLevel(bank)
+        self._fixed_gain = bank.fixed_gain
+        self._hop_s = bank.hop_s
+        self._enough_db = np.array([channel.present_c_n0_dbhz for channel in bank.channels])
+        self._drop_db = np.array([channel.loss_drop_db for channel in bank.channels])
+        self._loss_after_s = np.array([channel.loss_after_s for channel in bank.channels])
+        self.reset()
+
+    def reset(self) -> None:
+        """As new, but for the learned reference levels."""
+        count = len(self._enough_db)
+        self.reference.reset()
+        self.state: NDArray[np.int8] = np.full(count, -1, np.int8)
+        self._absent_s = np.zeros(count)
+        self._here_s = np.zeros(count)
+        self._age_s = 0.0
+
+    def process(self, detected: Detected) -> None:
+        """Take one hop."""
+        hop_s, slack_s = self._hop_s, self._hop_s / 2
+        self._age_s += hop_s
+        here = self._here(detected)
+        self._here_s = np.where(here, self._here_s + hop_s, 0)
+        self._absent_s = np.where(here, 0, self._absent_s + hop_s)
+        lost = detected.searched & (self._absent_s + slack_s > self._loss_after_s)
+        lost &= ~here & ((self.state == 1) | (self._age_s + slack_s > _JUDGE_AFTER_S))
+        back = self._here_s + slack_s > _RETURN_S
+        self.state = np.where(lost, 0, np.where(back, 1, self.state)).astype(np.int8)
+        steady = (self.state == 1) & here & detected.settled & ~detected.broken
+        self.reference.learn(detected.amplitude, steady)
+
+    def _here(self, detected: Detected) -> Flags:
+        """A line stands at the carrier, strong enough; the way back needs a little more than staying."""
+        extra_db = np.where(self.state == 0, _HYSTERESIS_DB, 0.0)
+        power = np.square(detected.hop_amplitude) - detected.noise_density / self._hop_s
+        c_n0_db = 10 * np.log10(np.maximum(power, 1e-30) / detected.noise_density)
+        here = c_n0_db > self._enough_db + extra_db
+        if self._fixed_gain:
+            floor_db = self.reference.working_dbfs - self._drop_db + extra_db
+            here &= ~(10 * np.log10(np.maximum(power, 1e-30)) < floor_db)
+        return here
