@@ -19,10 +19,10 @@ from monitord.blocks import Baseband, Block, Detected, Event, Fault, Moment, Pre
 from monitord.condition.tuner import Tuner
 from monitord.detect import DETECTORS
 from monitord.measure import METERS
-from monitord.measure.validity import faults_of
+from monitord.measure.validity import FaultJudge
 from monitord.publish.tally import Tally
 from monitord.quantities import Quantity
-from monitord.settings import Channel
+from monitord.settings import Channel, Source
 from monitord.stage import Bank, Meter, Outlet, Rule
 
 INTERVAL_S = 1.0
@@ -40,6 +40,12 @@ class Stream:
     center_hz: float
     real: bool
     fixed_gain: bool
+
+    @classmethod
+    def of(cls, block: Block, source: Source) -> "Stream":
+        """What a source's first block and its settings say."""
+        real = not np.iscomplexobj(block.samples)
+        return cls(block.rate_hz, block.center_hz, real, source.gain == "fixed")
 
 
 def banks_of(channels: Sequence[Channel]) -> list[list[Channel]]:
@@ -62,6 +68,7 @@ class _BankChain:
 
     def __init__(self, bank: Bank, tally: Tally) -> None:
         self.bank = bank
+        self.judge = FaultJudge(bank)
         self._tally = tally
         self._detector = DETECTORS[bank.channels[0].detector]()
         self._detector.prepare(bank)
@@ -212,7 +219,10 @@ class Chain:
 
     def _after_gap(self, span: Span) -> None:
         """Tell what is left of the interval in which the gap began, and begin anew."""
-        if self._pending and self._pending[-1].index // self._interval_hops != span.index // self._interval_hops:
+        if (
+            self._pending
+            and self._pending[-1].index // self._interval_hops != span.index // self._interval_hops
+        ):
             self._faults |= np.uint32(Fault.SOURCE_GAP)
             self._emit_reading()
         self._pending.clear()
@@ -223,7 +233,7 @@ class Chain:
         parts = [bank.measure(hop) for bank, hop in zip(self._banks, detected, strict=True)]
         fields = {name: self._merged([part[name] for part in parts]) for name in parts[0]}
         present, cut_off = fields.pop("present"), fields.pop("cut_off")
-        faults = [faults_of(hop, bank.bank) for bank, hop in zip(self._banks, detected, strict=True)]
+        faults = [bank.judge.faults(hop) for bank, hop in zip(self._banks, detected, strict=True)]
         return Moment(
             channels=self.names,
             span=span,
@@ -261,7 +271,8 @@ class Chain:
         """The banks' rows as one array in the order of the settings."""
         if len(parts) == 1 and self._in_order:
             return parts[0]
-        return np.concatenate(parts)[self._order]
+        merged: NDArray[Scalar] = np.concatenate(parts)[self._order]
+        return merged
 
     @contextmanager
     def _timed(self, stage: str) -> Iterator[None]:

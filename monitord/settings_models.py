@@ -8,7 +8,15 @@ import re
 import socket
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, ValidationInfo, field_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    ValidationInfo,
+    field_validator,
+)
 
 DETECTORS = ("synchronous", "envelope")
 """Names of the detectors that this version has."""
@@ -30,10 +38,12 @@ DATATYPES = tuple(
 NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}")
 NAME_RULE = "1 to 64 letters, digits, dots, hyphens and underscores, the first a letter or digit"
 BUILT_IN_RATE_HZ = 48_000.0
+MIN_RATE_HZ, MAX_RATE_HZ = 1_000.0, 50e6
 MIN_BANDWIDTH_HZ = 100.0
 DEFAULT_BANDWIDTH_HZ = 5_000.0
 
-_HOST = re.compile(r"(?P<host>\*|[A-Za-z0-9][A-Za-z0-9._-]*|\[[0-9A-Fa-f:.]+(?:%[A-Za-z0-9._-]+)?\]):(?P<port>[0-9]{1,5})")
+_HOST = r"\*|[A-Za-z0-9][A-Za-z0-9._-]*|\[[0-9A-Fa-f:.]+(?:%[A-Za-z0-9._-]+)?\]"
+_HOST_PORT = re.compile(rf"(?P<host>{_HOST}):(?P<port>[0-9]{{1,5}})")
 
 
 def quoted(names: tuple[str, ...]) -> str:
@@ -43,7 +53,7 @@ def quoted(names: tuple[str, ...]) -> str:
 
 def host_port(text: str) -> tuple[str, int] | None:
     """Split "host:port" (IPv6: "[::1]:port"); None where it is not that."""
-    match = _HOST.fullmatch(text)
+    match = _HOST_PORT.fullmatch(text)
     if match is None or int(match["port"]) > 65535:
         return None
     return match["host"], int(match["port"])
@@ -144,7 +154,7 @@ def _endpoint(value: str) -> str:
 def _listen(value: str) -> str:
     address = host_port(value)
     if address is None or address[0] == "*":
-        raise ValueError('must be "host:port" with a port from 0 to 65535, such as "127.0.0.1:9560" or "[::1]:9560"')
+        raise ValueError('must be "host:port", such as "127.0.0.1:9560" or "[::1]:9560", the port 0 to 65535')
     return value
 
 
@@ -184,8 +194,10 @@ class Source(_Section):
     """
 
     kind: Annotated[str, AfterValidator(_kind)] = Field(description=f"must be one of {quoted(KINDS)}")
-    sample_rate_hz: Annotated[float, _within(1e3, 50e6, "Hz")] | None = Field(None, validate_default=True)
-    center_hz: float | None = Field(None, validate_default=True)
+    sample_rate_hz: Annotated[float, _within(MIN_RATE_HZ, MAX_RATE_HZ, "Hz")] | None = Field(
+        default=None, validate_default=True
+    )
+    center_hz: float | None = Field(default=None, validate_default=True)
     gain: Literal["fixed", "automatic"] = "fixed"
     remove_dc: Annotated[bool, AfterValidator(_not_yet)] = False
     endpoint: Annotated[str, AfterValidator(_endpoint)] | None = None
@@ -211,7 +223,7 @@ class Source(_Section):
 
     @property
     def real(self) -> bool | None:
-        """The stream is a real IF (True) or IQ (False); None where only the stream or recording itself can say."""
+        """The stream is a real IF (True) or IQ (False); None where only the stream itself can say."""
         if self.kind == "simulated":
             return False
         if self.datatype is not None:
@@ -241,7 +253,7 @@ class ChannelKeys(_Section):
     """
 
     bandwidth_hz: Annotated[float, _at_least(MIN_BANDWIDTH_HZ, "Hz")] = DEFAULT_BANDWIDTH_HZ
-    emission_bandwidth_hz: float = Field(None, validate_default=True)
+    emission_bandwidth_hz: float = Field(default=None, validate_default=True)
     detector: Annotated[str, AfterValidator(_detector)] = "synchronous"
     acquire_hz: Annotated[float, _at_least(0, "Hz")] = 100.0
     loop_bandwidth_hz: Annotated[float, _within(0.5, 20, "Hz")] = 5.0
@@ -269,12 +281,12 @@ class Channel(ChannelKeys):
 
 
 class Raster(ChannelKeys):
-    """Many channels at once: carriers from `first_hz` to `last_hz`, both included where the step meets them."""
+    """Many channels at once: carriers from `first_hz` up, `last_hz` included where met."""
 
     first_hz: float = Field(description="must be the lowest carrier in Hz")
     last_hz: float = Field(description="must be the highest carrier in Hz")
-    step_hz: Annotated[float, AfterValidator(_positive)] = Field(description="must be the channel spacing in Hz")
-    name: Annotated[str, AfterValidator(_name_pattern)] = Field(description='must be a pattern such as "mw-{khz}"')
+    step_hz: Annotated[float, AfterValidator(_positive)] = Field(description="must be the spacing in Hz")
+    name: Annotated[str, AfterValidator(_name_pattern)] = Field(description='must be a pattern: "mw-{khz}"')
 
     def shared(self) -> dict[str, Any]:
         """Keys and values that every channel of the raster takes over."""

@@ -21,6 +21,7 @@ _EXPECTED = {
     "finite_number": "must be a finite number",
     "int_type": "must be a whole number",
     "string_type": "must be text in quotes",
+    "string_unicode": "must be valid Unicode text",
     "bool_type": "must be true or false",
     "model_type": "must be a table",
 }
@@ -39,7 +40,7 @@ _STAND_INS: Mapping[str, object] = {
 
 @dataclass(frozen=True, slots=True)
 class Part(Generic[Model]):
-    """One table that was read: where it stands in the file, what it holds, and which of its keys are wrong."""
+    """One table that was read: where it stands in the file, what it holds, which of its keys are wrong."""
 
     where: str
     model: Model
@@ -66,10 +67,11 @@ def shown(value: object) -> str:
     if isinstance(value, int) and abs(value) > 10**_LONGEST_SHOWN:
         return "(a very large number)"
     text = json.dumps(value, ensure_ascii=False) if isinstance(value, str | bool | int) else str(value)
-    return _one_line(text if len(text) <= _LONGEST_SHOWN else text[:_LONGEST_SHOWN] + "...")
+    return one_line(text if len(text) <= _LONGEST_SHOWN else text[:_LONGEST_SHOWN] + "...")
 
 
-def _one_line(text: str) -> str:
+def one_line(text: str) -> str:
+    """The text with everything unprintable escaped, line breaks above all."""
     return "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in text)
 
 

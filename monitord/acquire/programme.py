@@ -123,7 +123,7 @@ def _talk(rng: np.random.Generator) -> Real:
     cycles = np.cumsum(pitch, dtype=np.float64) / _MAKE_RATE_HZ
     cycles *= np.round(cycles[-1]) / cycles[-1]  # whole cycles, so that the loop closes
     turn = (cycles % 1.0).astype(np.float32) * np.float32(2 * np.pi)
-    frequency = np.arange(_MAKE_FRAMES // 2 + 1, dtype=np.float32) / LOOP_S
+    frequency: Real = (np.arange(_MAKE_FRAMES // 2 + 1) / LOOP_S).astype(np.float32)
     pulses = scipy.fft.rfft(np.exp(150 * (np.cos(turn) - 1))) * _dispersion(frequency)
     breath = scipy.fft.rfft(rng.standard_normal(_MAKE_FRAMES, np.float32))
     open_vowel = scipy.fft.irfft(pulses * _resonances(frequency, (620, 1150, 2500, 3500)))
@@ -150,7 +150,7 @@ def _plucked(note_hz: float, frames: int) -> Real:
     fall = np.exp(-at_s / 0.12).astype(np.float32)
     attack = np.minimum(at_s / 0.004, 1).astype(np.float32)
     rest = (np.exp(-at_s / 0.45) * np.minimum((at_s[-1] - at_s) / 0.02, 1)).astype(np.float32)
-    return (bright[index] * fall + mellow[index] * rest) * attack
+    return np.asarray((bright[index] * fall + mellow[index] * rest) * attack)
 
 
 def _music(rng: np.random.Generator) -> Real:
@@ -188,11 +188,20 @@ def _band_limited(audio: Real, band_hz: float) -> Real:
     return np.asarray(scipy.fft.irfft(spectrum, LOOP_FRAMES) * np.float32(LOOP_FRAMES / len(audio)))
 
 
+def _halfway(audio: Real) -> Real:
+    """The values halfway between the samples, where the true peak may lie; seamless."""
+    wide = np.concatenate((audio[-1:], audio, audio[:2]))
+    near, far = wide[1:-2] + wide[2:-1], wide[:-3] + wide[3:]
+    return np.asarray((9 * near - far) / 16)
+
+
 def _slot_peaks(audio: Real, negative: float, positive: float) -> Real:
     """How far the audio reaches towards two ceilings (1 = touches), in slots of 5 ms with both neighbours."""
-    rows = audio.reshape(-1, _SLOT_FRAMES)
-    reach = np.maximum(rows.max(axis=1) / positive, rows.min(axis=1) / -negative)
-    return np.maximum(reach, np.maximum(np.roll(reach, 1), np.roll(reach, -1)))
+    between = _halfway(audio)
+    high = np.maximum(audio, between).reshape(-1, _SLOT_FRAMES).max(axis=1)
+    low = np.minimum(audio, between).reshape(-1, _SLOT_FRAMES).min(axis=1)
+    reach = np.maximum(high / positive, low / -negative)
+    return np.asarray(np.maximum(reach, np.maximum(np.roll(reach, 1), np.roll(reach, -1))))
 
 
 def _between_slots(gain: Real) -> Real:
@@ -213,7 +222,8 @@ def _levelled(audio: Real) -> Real:
     drive = np.float32(1 / np.quantile(peaks, 0.85))
     driven = audio * drive
     driven *= _between_slots(np.minimum(1, 1 / (peaks * drive)))
-    return np.asarray(driven * np.float32(NEGATIVE_CEILING / -driven.min()), np.float32)
+    lowest = min(float(driven.min()), float(_halfway(driven).min()))
+    return np.asarray(driven * np.float32(NEGATIVE_CEILING / -lowest))
 
 
 def _overdriven(passage: Real) -> Real:

@@ -14,7 +14,6 @@ from monitord.settings import Channel, Source
 from monitord.stage import SourceCounts
 
 BLOCK_S = 0.05
-STATION_RATE_HZ = 48_000.0
 
 
 def builtin_channels() -> tuple[Channel, ...]:
@@ -38,8 +37,8 @@ class SimulatedSource:
         self.settings = settings
         self.counts = SourceCounts()
         self._channels = tuple(channels)
-        self._rate_hz = float(settings.sample_rate_hz or STATION_RATE_HZ)
-        self._center_hz = float(settings.center_hz or 0.0)
+        assert settings.sample_rate_hz is not None and settings.center_hz is not None  # defaults of this kind
+        self._rate_hz, self._center_hz = settings.sample_rate_hz, settings.center_hz
         self._frames = max(1, round(BLOCK_S * self._rate_hz))
         self._air: Air | None = None
         self._openings = 0

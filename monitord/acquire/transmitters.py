@@ -122,12 +122,12 @@ class _Programmes:
         hot = scenario.in_passage(self.story_s(start), frames / self._rate_hz, PASSAGE_S)
         stretch = self._stretch(int(start * step), int(whole[-1]) + TAPS, hot)
         audio = np.zeros((len(stretch), frames), np.float32)
-        for tap, weights in enumerate(interpolation_weights(position - whole)):
+        for tap, weights in enumerate(interpolation_weights(np.asarray(position - whole, np.float64))):
             audio += stretch.take(whole + tap, axis=1) * weights
         return audio
 
     def _stretch(self, first: int, length: int, hot: Flags) -> Real:
-        """`length` samples of each loop, float32 (transmitters, length), overdriven in the passage if `hot`."""
+        """`length` samples of each loop, float32 (transmitters, length); the passage overdriven if `hot`."""
         index = (first + self._ahead + np.arange(length)) % LOOP_FRAMES
         if hot.any():
             into = (index - self._passage) % LOOP_FRAMES
@@ -163,7 +163,7 @@ class _Carriers:
         amplitude = 10 ** ((self._level_dbfs[:, None] + change_db) / 20)
         slow = (amplitude * np.exp(2j * np.pi * coarse)).astype(np.complex64)
         fast = np.exp(2j * np.pi * turns[:, None] * np.arange(_FINE_FRAMES)).astype(np.complex64)
-        rows = envelope.reshape(count, -1, _FINE_FRAMES) * slow[:, :, None]
+        rows = envelope.reshape(count, len(coarse_at), _FINE_FRAMES) * slow[:, :, None]
         rows *= fast[:, None, :]
         self._phase = (self._phase + turns * advance) % 1.0
         return np.asarray(rows.sum(axis=0).ravel())

@@ -45,7 +45,9 @@ class _Bank:
         around = np.arange(-self._half, self._half + 1)
         self._bins = (center[:, None] + around) % grid.frame
         response = low_pass(grid, branch.pass_hz + grid.transition_hz / 2)[around]
-        gain = branch.points / grid.frame * (2 if real else 1)  # a real carrier of amplitude A has a line of A/2
+        gain = (
+            branch.points / grid.frame * (2 if real else 1)
+        )  # a real carrier of amplitude A has a line of A/2
         self._response: Real = (gain * response).astype(np.float32)
         self._turn_per_hop = np.mod(carrier_hz * grid.hop / grid.rate_hz, 1.0)
         self._turn_of_margin = np.mod(carrier_hz * grid.margin / grid.rate_hz, 1.0)
@@ -58,7 +60,7 @@ class _Bank:
             return None
         branch = self.branch
         time = (branch.points // 8 + np.arange(branch.frames)) / branch.rate_hz
-        return np.exp(-2j * np.pi * residual_hz[:, None] * time).astype(np.complex64)
+        return np.asarray(np.exp(-2j * np.pi * residual_hz[:, None] * time), np.complex64)
 
     def tune(self, spectrum: Complex, index: int) -> Complex:
         """Baseband of hop `index`, complex64 (channels, frames), from the spectrum of its frame."""

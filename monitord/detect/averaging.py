@@ -14,7 +14,9 @@ class TaperedMean:
 
     def __init__(self, channels: int, frames: int, hops: int) -> None:
         taper = np.hanning(frames * hops + 2)[1:-1].reshape(hops, frames)
-        self._weights = np.ascontiguousarray(taper[::-1].T.astype(np.float32))  # column j: window ending j hops later
+        self._weights = np.ascontiguousarray(
+            taper[::-1].T.astype(np.float32)
+        )  # column j: window ending j hops later
         self._share = taper[::-1].sum(axis=1)
         self._whole = self._share.sum()
         self._sums = np.zeros((hops, channels))
@@ -37,7 +39,8 @@ class TaperedMean:
     def mean(self) -> Precise:
         """The mean of what is in the window (channels,); NaN where that is nothing."""
         taken = self._taken[0]
-        return np.divide(self._sums[0], taken, out=np.full(taken.shape, np.nan), where=taken > 0)
+        mean: Precise = np.divide(self._sums[0], taken, out=np.full(taken.shape, np.nan), where=taken > 0)
+        return mean
 
     @property
     def filled(self) -> Precise:

@@ -8,6 +8,7 @@ from quadrature over the *mean* carrier, so that bass and over-modulation do not
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from monitord.blocks import Baseband, Complex, Flags, Precise, Span
 from monitord.condition.grid import STEPS
@@ -23,6 +24,8 @@ _BREAK_STEPS = 5  # 20 ms at less than a tenth: longer than any trough of progra
 _BREAK_BELOW = 0.1
 _NOISE_SMOOTHING = 0.2
 _MOST_ANGLE = 1.0
+
+Steps = NDArray[np.complex128]
 
 
 @dataclass(frozen=True, slots=True)
@@ -120,18 +123,20 @@ class CarrierRecovery:
         self._seek(baseband.samples)
         return carrier
 
-    def _averaged_steps(self, samples: Complex) -> Precise:
+    def _averaged_steps(self, samples: Complex) -> Steps:
         """The hop turned by the predicted phase and averaged over each step, complex128 (channels, STEPS)."""
         turn = np.exp(-1j * (self._speed / self._rate_hz)[:, None] * self._within_step).astype(np.complex64)
         parts = samples.reshape(self._channels, STEPS, -1)
         sums = np.matmul(parts, turn[:, :, None])[:, :, 0] / self._within_step.size
         predicted = self._phase[:, None] + self._speed[:, None] * self._step_start_s[:-1]
-        return sums * np.exp(-1j * predicted)
+        return np.asarray(sums * np.exp(-1j * predicted))
 
-    def _angles(self, steps: Precise) -> Precise:
+    def _angles(self, steps: Steps) -> Precise:
         """Phase errors for the loop; none where nothing is tracked or the line has just gone (it coasts)."""
         use = self._tracking & (self._bad == 0)
-        scale = np.divide(1.0, self._amplitude, out=np.zeros(self._channels), where=use & (self._amplitude > 0))
+        scale = np.divide(
+            1.0, self._amplitude, out=np.zeros(self._channels), where=use & (self._amplitude > 0)
+        )
         return np.clip(steps.imag * scale[:, None], -_MOST_ANGLE, _MOST_ANGLE)
 
     def _rotate(self, samples: Complex, path: Precise) -> tuple[Complex, Precise]:
@@ -157,7 +162,7 @@ class CarrierRecovery:
         self._low_run = run[:, -1]
         return np.asarray(run.max(axis=1) >= _BREAK_STEPS)
 
-    def _judge(self, line: Precise, noise: Precise) -> None:
+    def _judge(self, line: Steps, noise: Precise) -> None:
         """Count the hops that showed the line, and those that did not; give up after two of these."""
         power = np.square(np.abs(line))
         shown = (power - noise / self._hop_s > self._enough * noise) & (line.real > 0.5 * np.abs(line))
@@ -174,7 +179,7 @@ class CarrierRecovery:
     def _average(self, samples: Complex, broken: Flags) -> None:
         self._mean.take(samples.real, self._tracking & (self._bad == 0) & ~broken)
 
-    def _advance(self, path_end: Precise, speed_change: Precise, line: Precise) -> None:
+    def _advance(self, path_end: Precise, speed_change: Precise, line: Steps) -> None:
         """Carry phase, frequency and amplitude over to the next hop."""
         self._phase = self._phase + self._speed * self._hop_s + path_end
         self._speed = self._speed + speed_change

@@ -86,4 +86,6 @@ class LineSearch:
 def _longest_part(frames: int, steps: int, rate_hz: float, needed_hz: float) -> int:
     """The longest part that divides a step and keeps the rate needed."""
     step = frames // steps
-    return max(part for part in range(1, step + 1) if step % part == 0 and (part == 1 or rate_hz / part >= needed_hz))
+    return max(
+        part for part in range(1, step + 1) if step % part == 0 and (part == 1 or rate_hz / part >= needed_hz)
+    )

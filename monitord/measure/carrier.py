@@ -20,7 +20,7 @@ class CarrierMeter:
     Cramer-Rao bound for a line in white noise (Rife and Boorstyn 1974; CHECKS E15).
     """
 
-    quantities = (
+    quantities: tuple[Quantity, ...] = (
         Quantity("carrier_present", "", "The carrier is on the air.", "DESIGN 4", flag=True),
         Quantity("carrier_loop_locked", "", "The carrier loop holds the carrier.", "DESIGN 4", flag=True),
         Quantity("carrier_level_dbfs", "dBFS", "Level of the carrier alone, re full scale.", "DESIGN 4"),
@@ -107,5 +107,7 @@ def _c_n0_db(hops: list[Detected], steady: Flags) -> Precise:
     """Mean carrier power over mean noise density, dB-Hz."""
     power = np.mean([np.square(hop.hop_amplitude) for hop in hops], axis=0)
     noise = np.mean([hop.noise_density for hop in hops], axis=0)
-    ratio = np.maximum(power - noise / (hops[-1].span.end - hops[-1].span.start) * hops[-1].span.rate_hz, 1e-30)
+    ratio = np.maximum(
+        power - noise / (hops[-1].span.end - hops[-1].span.start) * hops[-1].span.rate_hz, 1e-30
+    )
     return np.where(steady, np.minimum(10 * np.log10(ratio / noise), MOST_C_N0_DBHZ), np.nan)

@@ -98,8 +98,9 @@ class ExcursionMeter:
         spent, span, cut = np.zeros(count), np.full((count, 2), np.nan), np.zeros(count, bool)
         level = np.maximum(np.maximum(_TROUGH_BELOW, 2 * clear), 1 - self._negative)
         judged = judged & (level < 0.6)
-        lowest = np.fmin(detected.in_phase.min(axis=1), self._tail[:, -1])
-        rows = np.flatnonzero(judged & (lowest < level))
+        lowest = np.fmin(detected.in_phase.min(axis=1), self._tail.min(axis=1))
+        near = np.maximum(_AT_ZERO + 4.3 * detected.sigma, 1 - self._negative - clear)
+        rows = np.flatnonzero(judged & (lowest < near))  # elsewhere neither verdict is possible
         if len(rows):
             wave = np.concatenate([self._tail[rows], detected.in_phase[rows]], axis=1)
             trough = _troughs(wave, level[rows])

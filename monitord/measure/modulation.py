@@ -19,7 +19,7 @@ _RECURRING_SHARE = 0.9
 class ModulationMeter:
     """m(t) = in-phase / carrier - 1; positive peak max m, negative peak -min m (47 CFR 73.14; CHECKS A2)."""
 
-    quantities = (
+    quantities: tuple[Quantity, ...] = (
         Quantity(
             "modulation_positive_peak_ratio",
             "",
@@ -100,11 +100,10 @@ class ModulationMeter:
 
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
-        positive, negative = np.fmax.reduce(self._peaks[-self._window :], axis=0)
-        recurring = self._recurring()
-        mean = np.divide(
-            self._square, self._square_hops, out=np.full(len(positive), np.nan), where=self._square_hops > 0
-        )
+        heard = self._square_hops > 0  # nothing of the past stands for an interval without a valid hop
+        positive, negative = np.where(heard, np.fmax.reduce(self._peaks[-self._window :], axis=0), np.nan)
+        recurring = self._recurring(heard)
+        mean = np.divide(self._square, self._square_hops, out=np.full(heard.shape, np.nan), where=heard)
         self._begin()
         return {
             "modulation_positive_peak_ratio": positive,
@@ -114,10 +113,10 @@ class ModulationMeter:
             "modulation_rms_ratio": np.sqrt(np.maximum(mean, 0)),
         }
 
-    def _recurring(self) -> Precise:
+    def _recurring(self, heard: Flags) -> Precise:
         """The 10th largest slot of the window, (2, channels); NaN until the window's time has been valid."""
         enough = np.isfinite(self._peaks[:, 0]).sum(axis=0) >= _RECURRING_SHARE * self._slots
-        ready = enough & (self._valid_hops >= self._slots)
+        ready = heard & enough & (self._valid_hops >= self._slots)
         if not ready.any():
             return np.full(self._peaks.shape[1:], np.nan)
         slots = np.where(np.isfinite(self._peaks), self._peaks, -np.inf)

@@ -14,7 +14,7 @@ from monitord.stage import Bank
 
 LEARN_S = 10.0
 _JUDGE_AFTER_S = 1.0  # from a fresh start: a weak carrier may need a second search
-_RETURN_S = 0.3
+RETURN_S = 0.3
 _HYSTERESIS_DB = 1.0
 
 _log = logging.getLogger("monitord.carrier")
@@ -94,7 +94,7 @@ class Presence:
         self._absent_s = np.where(here, 0, self._absent_s + hop_s)
         lost = detected.searched & (self._absent_s + slack_s > self._loss_after_s)
         lost &= ~here & ((self.state == 1) | (self._age_s + slack_s > _JUDGE_AFTER_S))
-        back = self._here_s + slack_s > _RETURN_S
+        back = self._here_s + slack_s > RETURN_S
         self.state = np.where(lost, 0, np.where(back, 1, self.state)).astype(np.int8)
         steady = (self.state == 1) & here & detected.settled & ~detected.broken
         self.reference.learn(detected.amplitude, steady)

@@ -65,8 +65,11 @@ class TruePeaks:
         place = np.argmax(pieces, axis=2) if sign > 0 else np.argmin(pieces, axis=2)
         around = (chosen * parts.shape[2] + place + margin)[:, :, None] + _TAP
         fine = sign * (self._wave[self._row[:, :, None], around] @ self._kernel)
-        top = np.argmax(fine[:, :, 1:-1], axis=2)[:, :, None] + 1
-        low, mid, high = (np.take_along_axis(fine, top + step, axis=2)[:, :, 0] for step in (-1, 0, 1))
+        flat = fine.reshape(len(self._row), -1)
+        inner = fine[:, :, 1:-1].reshape(len(self._row), -1)
+        best = np.argmax(inner, axis=1)
+        place_in_flat = best + 1 + best // (len(_SHIFT) - 2) * 2
+        low, mid, high = (flat[self._row[:, 0], place_in_flat + step] for step in (-1, 0, 1))
         bend = 2 * mid - low - high
         lift = np.square(high - low) / (8 * np.where(bend > 0, bend, np.inf))
-        return np.asarray(np.max(mid + np.minimum(lift, np.maximum(bend, 0)), axis=1), np.float64)
+        return np.asarray(mid + np.minimum(lift, np.maximum(bend, 0)), np.float64)

@@ -12,23 +12,29 @@ _PEAKS_C_N0_DBHZ = 60.0  # in +-5 kHz: 20 dB, where noise and programme peaks ar
 
 def peaks_mean_something(detected: Detected, bank: Bank) -> Flags:
     """C/N0 of this hop is high enough, for the bandwidth, to tell peaks from noise (channels,)."""
-    least_db = _PEAKS_C_N0_DBHZ + 10 * np.log10(bank.channels[0].bandwidth_hz / 5000)
-    return np.asarray(np.square(detected.hop_amplitude) > 10 ** (least_db / 10) * detected.noise_density)
+    least = 10 ** (_PEAKS_C_N0_DBHZ / 10) * bank.channels[0].bandwidth_hz / 5000
+    return np.asarray(np.square(detected.hop_amplitude) > least * detected.noise_density)
 
 
-def faults_of(detected: Detected, bank: Bank) -> NDArray[np.uint32]:
-    """Bits of Fault that stand against this hop (channels,)."""
-    weak = np.square(detected.hop_amplitude) < 10 ** (WEAK_C_N0_DBHZ / 10) * detected.noise_density
-    weak |= ~peaks_mean_something(detected, bank)
-    band_limited = [channel.emission_bandwidth_hz > channel.bandwidth_hz for channel in bank.channels]
-    bits = np.zeros(len(weak), np.uint32)
-    for fault, there in (
-        (Fault.UNLOCKED, ~detected.locked),
-        (Fault.WEAK_SIGNAL, weak & detected.locked),
-        (Fault.SETTLING, detected.locked & ~detected.settled),
-        (Fault.SOURCE_GAP, np.full(len(bits), detected.span.fresh and detected.span.index > 0)),
-        (Fault.CLIPPING, np.full(len(bits), detected.span.clipped > 0)),
-        (Fault.BAND_LIMITED, np.array(band_limited)),
-    ):
-        bits |= np.where(there, np.uint32(fault), np.uint32(0))
-    return bits
+class FaultJudge:
+    """Judges the hops of one bank; keeps nothing from hop to hop."""
+
+    def __init__(self, bank: Bank) -> None:
+        self._bank = bank
+        beyond = [channel.emission_bandwidth_hz > channel.bandwidth_hz for channel in bank.channels]
+        self._always: NDArray[np.uint32] = np.where(beyond, np.uint32(Fault.BAND_LIMITED), np.uint32(0))
+
+    def faults(self, detected: Detected) -> NDArray[np.uint32]:
+        """Bits of Fault that stand against this hop (channels,)."""
+        span = detected.span
+        weak = np.square(detected.hop_amplitude) < 10 ** (WEAK_C_N0_DBHZ / 10) * detected.noise_density
+        weak |= ~peaks_mean_something(detected, self._bank)
+        bits = self._always.copy()
+        bits[~detected.locked] |= np.uint32(Fault.UNLOCKED)
+        bits[weak & detected.locked] |= np.uint32(Fault.WEAK_SIGNAL)
+        bits[detected.locked & ~detected.settled] |= np.uint32(Fault.SETTLING)
+        if span.fresh and span.index > 0:
+            bits |= np.uint32(Fault.SOURCE_GAP)
+        if span.clipped:
+            bits |= np.uint32(Fault.CLIPPING)
+        return bits

@@ -5,6 +5,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from monitord.blocks import Event, Moment, Reading
+from monitord.measure.presence import RETURN_S
 from monitord.notice.episodes import Episodes
 from monitord.settings import Channel
 
@@ -38,14 +39,10 @@ class CarrierLossRule:
         for row in np.flatnonzero(lost):
             channel = self._channels[row]
             started_s = max(0.0, moment.span.elapsed_s - max(float(self._after_s[row]), hop_s))
-            level, limit = float(moment.level_dbfs[row]), float(channel.present_c_n0_dbhz)
-            events.append(
-                self._episodes.begin(KIND, channel.name, moment.span, started_s, extreme=level, limit=limit)
-            )
-        for row in np.flatnonzero(back):
-            events.append(
-                self._episodes.end(KIND, self._channels[row].name, moment.span, moment.span.elapsed_s - hop_s)
-            )
+            events.append(self._episodes.begin(KIND, channel.name, moment.span, started_s))
+        returned_s = moment.span.elapsed_s - RETURN_S
+        names = [self._channels[row].name for row in np.flatnonzero(back)]
+        events += [self._episodes.end(KIND, name, moment.span, returned_s) for name in names]
         self._lost = (self._lost | lost) & ~back
         return events
 

@@ -64,9 +64,7 @@ class OvermodulationRule:
             ),
         )
 
-    def _close(
-        self, polarity: str, moment: Moment, spans: Precise, beyond: Flags
-    ) -> list[Event]:
+    def _close(self, polarity: str, moment: Moment, spans: Precise, beyond: Flags) -> list[Event]:
         """End what has been quiet for longer than the hold, before the next excursion or by the hop's end."""
         kind = f"overmodulation-{polarity}"
         last = self._last_s[polarity]

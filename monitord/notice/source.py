@@ -1,5 +1,6 @@
 """Loss of the source and gaps in it: told apart from loss of a carrier, which nobody can see meanwhile."""
 
+import time
 from collections.abc import Sequence
 
 from monitord.blocks import Block, Event
@@ -54,6 +55,14 @@ class SourceRule:
             return ()
         return (self._episodes.begin(LOST, None, None, last_s, started_utc=last_utc, limit=LOST_AFTER_S),)
 
-    def finish(self) -> Sequence[Event]:
-        """The stream is over: return what is still open, as it stands."""
-        return self._episodes.leave()
+    def started(self) -> Sequence[Event]:
+        """The daemon has started: over as soon as it is told."""
+        return self._at_once("daemon-started")
+
+    def stopped(self) -> Sequence[Event]:
+        """The daemon stops: what is open is left as it stands."""
+        return (*self._episodes.leave(), *self._at_once("daemon-stopped"))
+
+    def _at_once(self, kind: str) -> Sequence[Event]:
+        self._episodes.begin(kind, None, None, 0.0, started_utc=time.time())
+        return (self._episodes.end(kind, None, None, 0.0),)

@@ -8,7 +8,7 @@ from prometheus_client.core import CounterMetricFamily, GaugeMetricFamily, InfoM
 from prometheus_client.exposition import choose_encoder, generate_latest
 from prometheus_client.registry import Collector
 
-from monitord.notice.kinds import LASTING_SOURCE_KINDS, SOURCE_KINDS
+from monitord.notice.kinds import SOURCE_ALARMS, SOURCE_KINDS
 from monitord.publish.families import PREFIX
 from monitord.publish.tally import Tally
 
@@ -22,13 +22,13 @@ class DaemonFamilies(Collector):
 
     lost: the source is lost, whatever the tally says.
     events: how many events of each source kind began.
-    alarms: 1 for each lasting source kind while an event of it is open, else 0.
+    alarms: 1 for each alarm of the source while an event of it is open, else 0.
     """
 
     def __init__(self, tally: Tally, version: str) -> None:
         self.lost = False
         self.events = dict.fromkeys(SOURCE_KINDS, 0)
-        self.alarms = dict.fromkeys(LASTING_SOURCE_KINDS, 0)
+        self.alarms = dict.fromkeys(SOURCE_ALARMS, 0)
         self._tally = tally
         self._version = version
         self._registry = CollectorRegistry()

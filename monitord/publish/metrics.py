@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from monitord.blocks import FAULT_NAMES, Event, Fault, Moment, Precise, Reading
-from monitord.notice.kinds import CHANNEL_KINDS, LASTING_SOURCE_KINDS, SOURCE_KINDS
+from monitord.notice.kinds import CHANNEL_KINDS, SOURCE_ALARMS, SOURCE_KINDS
 from monitord.publish.daemon import END, DaemonFamilies
 from monitord.publish.families import ChannelFamily, Numbers
 from monitord.publish.tally import Tally
@@ -96,7 +96,10 @@ class MetricsPage:
         hop_s = (moment.span.end - moment.span.start) / moment.span.rate_hz
         table = self._table
         with self._lock:
-            table["carrier_present"][rows] = moment.present == 1
+            # Not known yet, after a gap: what was known stands until it is.
+            table["carrier_present"][rows] = np.where(
+                moment.present < 0, table["carrier_present"][rows], moment.present == 1
+            )
             table["carrier_loop_locked"][rows] = moment.locked
             table["overmodulation_seconds_total"][rows] += over_s
             table["carrier_absent_seconds_total"][rows] += hop_s * (moment.present == 0)
@@ -199,7 +202,7 @@ class MetricsPage:
         if event.channel is not None:
             row = self._row_of[event.channel]
             self._table["alarm_active"][row, CHANNEL_KINDS.index(event.kind)] = active
-        elif event.kind in LASTING_SOURCE_KINDS:
+        elif event.kind in SOURCE_ALARMS:
             self._daemon.alarms[event.kind] = int(active)
 
     def _rows(self, channels: tuple[str, ...]) -> Rows:
