@@ -97,7 +97,8 @@ class Service:
         for number in (signal.SIGTERM, signal.SIGINT):
             signal.signal(number, self._on_signal)
         self._web.start()
-        _log.info("listening on %s", self._settings.http.listen)
+        host = self._settings.http.listen.rpartition(":")[0]
+        _log.info("metrics and health on http://%s:%d", host, self._web.port)
         source = make_source(self._settings.source, self._settings.channels)
         self._tally.rejected = source.counts.rejected
         self._tell(self._watch.started())
