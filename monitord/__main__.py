@@ -10,6 +10,9 @@ from pathlib import Path
 from monitord import __version__
 from monitord.errors import ConfigError, MonitordError
 
+# The chain's matrices are small: a second BLAS thread would only wait for them, and burn time waiting.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 DONE, FAILED, USAGE, CONFIG = 0, 1, 2, 78
 
 

@@ -80,6 +80,7 @@ class _BankChain:
             self._meters[type(meter).__name__] = meter
             self._quantities += meter.quantities
         self._reported: set[str] = set()
+        self._unknown = _unknown_fields(len(bank.channels))
 
     def reset(self) -> None:
         self._detector.reset()
@@ -91,21 +92,12 @@ class _BankChain:
 
     def measure(self, detected: Detected) -> dict[str, Precise]:
         """This hop's fields of Moment."""
-        count = len(self.bank.channels)
-        fields: dict[str, Precise] = {
-            "level_dbfs": np.full(count, np.nan),
-            "present": np.full(count, -1.0),
-            "positive_peak": np.full(count, np.nan),
-            "negative_peak": np.full(count, np.nan),
-            "over_positive_s": np.zeros(count),
-            "over_negative_s": np.zeros(count),
-            "over_positive_span_s": np.full((count, 2), np.nan),
-            "over_negative_span_s": np.full((count, 2), np.nan),
-            "cut_off": np.zeros(count),
-        }
+        fields = dict(self._unknown)
         for name, meter in self._meters.items():
-            with self._guard(name):
+            try:
                 fields |= meter.process(detected)
+            except Exception as error:  # whatever a meter does wrong must not cost the daemon
+                self._failed(name, error)
         return fields
 
     def reading(self) -> dict[str, Precise]:
@@ -116,19 +108,32 @@ class _BankChain:
             for quantity in self._quantities
         }
         for name, meter in self._meters.items():
-            with self._guard(name):
+            try:
                 values |= meter.reading()
+            except Exception as error:  # as above
+                self._failed(name, error)
         return values
 
-    @contextmanager
-    def _guard(self, name: str) -> Iterator[None]:
-        try:
-            yield
-        except Exception:  # whatever a meter does wrong must not cost the daemon
-            self._tally.stage_failures[name] += 1
-            if name not in self._reported:
-                self._reported.add(name)
-                _log.exception("%s failed; its quantities are absent until it works again", name)
+    def _failed(self, name: str, error: Exception) -> None:
+        self._tally.stage_failures[name] += 1
+        if name not in self._reported:
+            self._reported.add(name)
+            _log.error("%s failed; its quantities are absent until it works again", name, exc_info=error)
+
+
+def _unknown_fields(count: int) -> dict[str, Precise]:
+    """Fields of a Moment of which no meter knows anything."""
+    return {
+        "level_dbfs": np.full(count, np.nan),
+        "present": np.full(count, -1.0),
+        "positive_peak": np.full(count, np.nan),
+        "negative_peak": np.full(count, np.nan),
+        "over_positive_s": np.zeros(count),
+        "over_negative_s": np.zeros(count),
+        "over_positive_span_s": np.full((count, 2), np.nan),
+        "over_negative_span_s": np.full((count, 2), np.nan),
+        "cut_off": np.zeros(count),
+    }
 
 
 class Chain:

@@ -25,8 +25,9 @@ class TaperedMean:
     def take(self, in_phase: Real, use: Flags) -> None:
         """Add one hop, float32 (channels, frames), of the rows in `use` (channels,)."""
         sums = np.where(use[:, None], in_phase @ self._weights, 0.0)
-        self._sums = np.concatenate([self._sums[1:], np.zeros((1, len(use)))])
-        self._taken = np.concatenate([self._taken[1:], np.zeros((1, len(use)))])
+        for window in (self._sums, self._taken):
+            window[:-1] = window[1:]
+            window[-1] = 0
         self._sums += sums.T
         self._taken += use * self._share[:, None]
 

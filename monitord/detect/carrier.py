@@ -24,6 +24,7 @@ _BREAK_STEPS = 5  # 20 ms at less than a tenth: longer than any trough of progra
 _BREAK_BELOW = 0.1
 _NOISE_SMOOTHING = 0.2
 _MOST_ANGLE = 1.0
+_LEAST_AMPLITUDE = 1e-12  # -240 dBFS: keeps the divisions by an amplitude defined where there is none
 
 Steps = NDArray[np.complex128]
 
@@ -113,7 +114,7 @@ class CarrierRecovery:
             hop_amplitude=np.where(self._tracking, np.abs(line), 0.0),
             noise_density=noise,
             sigma=sigma,
-            phase=phase + steps.imag / np.where(self._amplitude > 0, self._amplitude, 1)[:, None],
+            phase=phase + steps.imag / np.maximum(self._amplitude, _LEAST_AMPLITUDE)[:, None],
             offset_hz=np.where(locked, self._speed / (2 * np.pi), np.nan),
             searched=self._tracking | self._search.ready,
             locked=locked,
@@ -134,10 +135,8 @@ class CarrierRecovery:
     def _angles(self, steps: Steps) -> Precise:
         """Phase errors for the loop; none where nothing is tracked or the line has just gone (it coasts)."""
         use = self._tracking & (self._bad == 0)
-        scale = np.divide(
-            1.0, self._amplitude, out=np.zeros(self._channels), where=use & (self._amplitude > 0)
-        )
-        return np.clip(steps.imag * scale[:, None], -_MOST_ANGLE, _MOST_ANGLE)
+        angle = steps.imag * (use / np.maximum(self._amplitude, _LEAST_AMPLITUDE))[:, None]
+        return np.minimum(np.maximum(angle, -_MOST_ANGLE), _MOST_ANGLE)
 
     def _rotate(self, samples: Complex, path: Precise) -> tuple[Complex, Precise]:
         """Turn the samples to phase 0; also the phases at the steps' middles, float64 (channels, STEPS)."""
@@ -155,7 +154,11 @@ class CarrierRecovery:
 
     def _breaks(self, steps: Precise) -> Flags:
         """Rows whose carrier was cut within this hop, counting a cut that began in the hop before."""
-        low = steps < _BREAK_BELOW * np.where(np.isfinite(self._mean.mean), self._mean.mean, 0)[:, None]
+        mean = self._mean.mean
+        low = steps < _BREAK_BELOW * np.where(np.isfinite(mean), mean, 0)[:, None]
+        if not low.any():
+            self._low_run[:] = 0
+            return np.zeros(self._channels, bool)
         place = np.arange(1, STEPS + 1)
         last_high = np.maximum.accumulate(np.where(low, 0, place), axis=1)
         run = np.where(last_high == 0, place + self._low_run[:, None], place - last_high) * low

@@ -68,7 +68,8 @@ class ModulationMeter:
         """See stage.Meter."""
         count = len(self._bank.channels)
         self._true = TruePeaks(count, self._bank.frames)
-        self._peaks = np.full((self._slots, 2, count), np.nan)  # newest last
+        self._peaks = np.full((self._slots, 2, count), np.nan)  # a ring: `_place` holds the newest
+        self._place = 0
         self._valid_hops = np.zeros(count, np.int64)
         self._begin()
 
@@ -92,16 +93,17 @@ class ModulationMeter:
         return {"positive_peak": peaks[0], "negative_peak": peaks[1]}
 
     def _remember(self, peaks: Precise, broken: Flags) -> None:
-        self._peaks = np.roll(self._peaks, -1, axis=0)
-        self._peaks[-1] = peaks
         # A cut is known for sure only in the hop after the one in which it began.
-        self._peaks[-2, :, broken] = np.nan
+        self._peaks[self._place, :, broken] = np.nan
+        self._place = (self._place + 1) % self._slots
+        self._peaks[self._place] = peaks
         self._valid_hops += np.isfinite(peaks[0])
 
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
         heard = self._square_hops > 0  # nothing of the past stands for an interval without a valid hop
-        positive, negative = np.where(heard, np.fmax.reduce(self._peaks[-self._window :], axis=0), np.nan)
+        window = (self._place - np.arange(self._window)) % self._slots
+        positive, negative = np.where(heard, np.fmax.reduce(self._peaks[window], axis=0), np.nan)
         recurring = self._recurring(heard)
         mean = np.divide(self._square, self._square_hops, out=np.full(heard.shape, np.nan), where=heard)
         self._begin()

@@ -15,7 +15,7 @@ from monitord.stage import Bank
 LEARN_S = 10.0
 _JUDGE_AFTER_S = 1.0  # from a fresh start: a weak carrier may need a second search
 RETURN_S = 0.3
-_HYSTERESIS_DB = 1.0
+_HYSTERESIS = 10**0.1  # 1 dB
 
 _log = logging.getLogger("monitord.carrier")
 
@@ -35,31 +35,31 @@ class ReferenceLevel:
         learned = self._bank.learned_levels
         known = np.array([learned.get(channel.name, np.nan) for channel in self._bank.channels])
         self.level_dbfs = np.where(np.isfinite(self.given), self.given, known)
+        self._working_power = 10 ** (self.level_dbfs / 10)
+        self._learning = ~np.isfinite(self.level_dbfs)
         self._power = np.zeros(len(known))
         self._hops = np.zeros(len(known), np.int64)
 
     @property
-    def working_dbfs(self) -> Precise:
-        """The reference, or while it is still being learned, the mean so far; NaN where there is none."""
-        return np.where(np.isfinite(self.level_dbfs), self.level_dbfs, self._so_far())
+    def working_power(self) -> Precise:
+        """The reference, or while it is still being learned, the mean so far, as power; NaN where there is none."""
+        return self._working_power
 
     def learn(self, amplitude: Precise, steady: Flags) -> None:
         """Take the carriers' amplitudes of one hop, where they are steady."""
-        learning = steady & ~np.isfinite(self.level_dbfs)
+        learning = steady & self._learning
         if not learning.any():
             return
         self._power[learning] += np.square(amplitude[learning])
         self._hops[learning] += 1
+        self._working_power[learning] = self._power[learning] / self._hops[learning]
         for row in np.flatnonzero(learning & (self._hops >= self._hops_wanted)):
             self._keep(int(row))
 
-    def _so_far(self) -> Precise:
-        mean = np.divide(self._power, self._hops, out=np.full(len(self._hops), np.nan), where=self._hops > 0)
-        return np.asarray(10 * np.log10(mean))
-
     def _keep(self, row: int) -> None:
-        name, level = self._bank.channels[row].name, float(self._so_far()[row])
+        name, level = self._bank.channels[row].name, float(10 * np.log10(self._working_power[row]))
         self.level_dbfs[row] = level
+        self._learning[row] = False
         self._bank.learned_levels[name] = level
         _log.info("%s: reference level learned: %.2f dBFS (reference_level_dbfs is not set)", name, level)
 
@@ -71,14 +71,14 @@ class Presence:
         self.reference = ReferenceLevel(bank)
         self._fixed_gain = bank.fixed_gain
         self._hop_s = bank.hop_s
-        self._enough_db = np.array([channel.present_c_n0_dbhz for channel in bank.channels])
-        self._drop_db = np.array([channel.loss_drop_db for channel in bank.channels])
+        self._enough = 10 ** (np.array([channel.present_c_n0_dbhz for channel in bank.channels]) / 10)
+        self._drop = 10 ** (-np.array([channel.loss_drop_db for channel in bank.channels]) / 10)
         self._loss_after_s = np.array([channel.loss_after_s for channel in bank.channels])
         self.reset()
 
     def reset(self) -> None:
         """As new, but for the learned reference levels."""
-        count = len(self._enough_db)
+        count = len(self._enough)
         self.reference.reset()
         self.state: NDArray[np.int8] = np.full(count, -1, np.int8)
         self._absent_s = np.zeros(count)
@@ -87,25 +87,28 @@ class Presence:
 
     def process(self, detected: Detected) -> None:
         """Take one hop."""
-        hop_s, slack_s = self._hop_s, self._hop_s / 2
-        self._age_s += hop_s
+        self._age_s += self._hop_s
         here = self._here(detected)
+        if not (here & (self.state == 1)).all() or self._absent_s.any():
+            self._count(here, detected.searched)
+        steady = here & (self.state == 1) & detected.settled & ~detected.broken
+        self.reference.learn(detected.amplitude, steady)
+
+    def _count(self, here: Flags, searched: Flags) -> None:
+        """For how long each row has been there or not, and what follows from it."""
+        hop_s, slack_s = self._hop_s, self._hop_s / 2
         self._here_s = np.where(here, self._here_s + hop_s, 0)
         self._absent_s = np.where(here, 0, self._absent_s + hop_s)
-        lost = detected.searched & (self._absent_s + slack_s > self._loss_after_s)
+        lost = searched & (self._absent_s + slack_s > self._loss_after_s)
         lost &= ~here & ((self.state == 1) | (self._age_s + slack_s > _JUDGE_AFTER_S))
         back = self._here_s + slack_s > RETURN_S
         self.state = np.where(lost, 0, np.where(back, 1, self.state)).astype(np.int8)
-        steady = (self.state == 1) & here & detected.settled & ~detected.broken
-        self.reference.learn(detected.amplitude, steady)
 
     def _here(self, detected: Detected) -> Flags:
         """A line stands at the carrier, strong enough; the way back needs a little more than staying."""
-        extra_db = np.where(self.state == 0, _HYSTERESIS_DB, 0.0)
         power = np.square(detected.hop_amplitude) - detected.noise_density / self._hop_s
-        c_n0_db = 10 * np.log10(np.maximum(power, 1e-30) / detected.noise_density)
-        here = c_n0_db > self._enough_db + extra_db
+        power /= np.where(self.state == 0, _HYSTERESIS, 1)
+        here = power > self._enough * detected.noise_density
         if self._fixed_gain:
-            floor_db = self.reference.working_dbfs - self._drop_db + extra_db
-            here &= ~(10 * np.log10(np.maximum(power, 1e-30)) < floor_db)
-        return here
+            here &= ~(power < self.reference.working_power * self._drop)
+        return np.asarray(here)

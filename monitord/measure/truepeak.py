@@ -41,6 +41,7 @@ class TruePeaks:
         self._wave: Real = np.full((channels, frames + 2 * self._margin), np.nan, np.float32)
         self._frames = frames
         self._row = np.arange(channels)[:, None]
+        self._row_of_both = np.concatenate([self._row, self._row])
 
     @property
     def fresh(self) -> Real:
@@ -54,22 +55,28 @@ class TruePeaks:
 
     def find(self) -> tuple[Precise, Precise]:
         """Largest and smallest value of the hop, float64 (channels,) each; NaN where the wave has NaN."""
-        return self._highest(1), -self._highest(-1)
+        rows, margin = len(self._row), self._margin
+        parts = self._wave[:, margin : margin + self._frames].reshape(rows, STEPS, -1)
+        extreme = np.concatenate([parts.max(axis=2), -parts.min(axis=2)])  # then both polarities go one way
+        chosen = extreme.argpartition(-_CANDIDATES, axis=1)[:, -_CANDIDATES:]
+        pieces = parts[self._row_of_both, chosen]
+        pieces[rows:] *= -1
+        place = chosen * parts.shape[2] + pieces.argmax(axis=2) + margin
+        around = self._wave[self._row_of_both[:, :, None], place[:, :, None] + _TAP]
+        around[rows:] *= -1
+        peak = _refined(around @ self._kernel)
+        return peak[:rows], -peak[rows:]
 
-    def _highest(self, sign: int) -> Precise:
-        margin = self._margin
-        parts = self._wave[:, margin : margin + self._frames].reshape(len(self._row), STEPS, -1)
-        extreme = parts.max(axis=2) if sign > 0 else -parts.min(axis=2)
-        chosen = np.argpartition(extreme, -_CANDIDATES, axis=1)[:, -_CANDIDATES:]
-        pieces = parts[self._row, chosen]
-        place = np.argmax(pieces, axis=2) if sign > 0 else np.argmin(pieces, axis=2)
-        around = (chosen * parts.shape[2] + place + margin)[:, :, None] + _TAP
-        fine = sign * (self._wave[self._row[:, :, None], around] @ self._kernel)
-        flat = fine.reshape(len(self._row), -1)
-        inner = fine[:, :, 1:-1].reshape(len(self._row), -1)
-        best = np.argmax(inner, axis=1)
-        place_in_flat = best + 1 + best // (len(_SHIFT) - 2) * 2
-        low, mid, high = (flat[self._row[:, 0], place_in_flat + step] for step in (-1, 0, 1))
-        bend = 2 * mid - low - high
-        lift = np.square(high - low) / (8 * np.where(bend > 0, bend, np.inf))
-        return np.asarray(mid + np.minimum(lift, np.maximum(bend, 0)), np.float64)
+
+def _refined(fine: Real) -> Precise:
+    """Top of the highest of the interpolated stretches (rows, candidates, points), by a parabola (rows,)."""
+    rows, candidates, points = fine.shape
+    flat = fine.reshape(rows, candidates * points)
+    inner = fine[:, :, 1:-1].reshape(rows, candidates * (points - 2))
+    best = inner.argmax(axis=1)
+    place = best + 1 + best // (points - 2) * 2
+    row = np.arange(rows)
+    low, mid, high = (flat[row, place + step].astype(np.float64) for step in (-1, 0, 1))
+    bend = 2 * mid - low - high
+    lift = np.square(high - low) / (8 * np.where(bend > 0, bend, np.inf))
+    return np.asarray(mid + np.minimum(lift, np.maximum(bend, 0)))

@@ -32,6 +32,8 @@ class CarrierLossRule:
 
     def moment(self, moment: Moment) -> Sequence[Event]:
         """See stage.Rule."""
+        if not (moment.present == 0).any() and not self._lost.any():
+            return ()
         lost = self._expected & (moment.present == 0) & ~self._lost
         back = self._lost & (moment.present == 1)
         events: list[Event] = []

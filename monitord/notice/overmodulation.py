@@ -17,12 +17,14 @@ class OvermodulationRule:
     def prepare(self, channels: Sequence[Channel]) -> None:
         """See stage.Rule."""
         self._channels = tuple(channels)
+        self._hold_s = np.array([channel.limits.hold_s for channel in channels])
         self.reset()
 
     def reset(self) -> None:
         """See stage.Rule."""
         self._episodes = Episodes()
         self._last_s = {polarity: np.full(len(self._channels), -np.inf) for polarity in POLARITIES}
+        self._running = dict.fromkeys(POLARITIES, False)
         self._peaks = {polarity: np.full(len(self._channels), np.nan) for polarity in POLARITIES}
         self._stream: int | None = None
 
@@ -41,9 +43,12 @@ class OvermodulationRule:
             peaks = np.fmax(highest, self._peaks[polarity])
             self._peaks[polarity] = highest
             beyond = trusted & np.isfinite(spans[:, 0])
+            if not self._running[polarity] and not beyond.any():
+                continue
             events += self._close(polarity, moment, spans, beyond)
             for row in np.flatnonzero(beyond):
                 events += self._excursion(polarity, int(row), moment, spans[row], float(peaks[row]))
+            self._running[polarity] = bool(np.isfinite(self._last_s[polarity]).any())
         return events
 
     def _excursion(
@@ -68,10 +73,9 @@ class OvermodulationRule:
         """End what has been quiet for longer than the hold, before the next excursion or by the hop's end."""
         kind = f"overmodulation-{polarity}"
         last = self._last_s[polarity]
-        hold = np.array([channel.limits.hold_s for channel in self._channels])
         until = np.where(beyond, spans[:, 0], moment.span.elapsed_s)
         events = []
-        for row in np.flatnonzero(np.isfinite(last) & (until - last > hold)):
+        for row in np.flatnonzero(np.isfinite(last) & (until - last > self._hold_s)):
             name = self._channels[row].name
             if self._episodes.is_open(kind, name):
                 events.append(self._episodes.end(kind, name, moment.span, float(last[row])))
@@ -84,6 +88,7 @@ class OvermodulationRule:
 
     def finish(self) -> Sequence[Event]:
         """See stage.Rule."""
-        for last in self._last_s.values():
-            last[:] = -np.inf
+        for polarity in POLARITIES:
+            self._last_s[polarity][:] = -np.inf
+            self._running[polarity] = False
         return self._episodes.leave()

@@ -1,6 +1,7 @@
 """The HTTP server: /metrics, /healthz and a pointer to both, in a thread and an event loop of its own."""
 
 import asyncio
+import contextlib
 import os
 import socket
 import threading
@@ -95,8 +96,26 @@ class _Server(uvicorn.Server):
     def __init__(self, config: uvicorn.Config) -> None:
         super().__init__(config)
         self.ready = threading.Event()
+        self._loop: asyncio.AbstractEventLoop | None = None
+        self._ending = asyncio.Event()
+
+    async def main_loop(self) -> None:
+        """Sleep until asked to end; ten wakes a second, as they come, would cost more than a scrape does."""
+        seconds = 0
+        while not self.should_exit:
+            await self.on_tick(10 * seconds)  # renews the Date header
+            seconds += 1
+            with contextlib.suppress(TimeoutError):
+                await asyncio.wait_for(self._ending.wait(), 1.0)
+
+    def end(self) -> None:
+        """Ask the server to end. From any thread."""
+        self.should_exit = True
+        if self._loop is not None:
+            self._loop.call_soon_threadsafe(self._ending.set)
 
     async def startup(self, sockets: list[socket.socket] | None = None) -> None:
+        self._loop = asyncio.get_running_loop()
         await super().startup(sockets)
         self.ready.set()
 
@@ -161,7 +180,7 @@ class WebServer:
         """End within a second, whatever connections are still open. May be called twice."""
         if self._thread is None or self._socket is None:
             return
-        self._server.should_exit = True
+        self._server.end()
         self._thread.join(1.0)
         self._socket.close()
         self._thread = None
