@@ -114,13 +114,14 @@ class Detected:
     amplitude: carrier amplitude (channels,), full scale = 1; NaN where there is no carrier.
     hop_amplitude: amplitude of the carrier in this hop alone (channels,), never NaN.
     noise_density: reception noise of this hop, power per Hz re full scale (channels,).
-    sigma: standard deviation of the reception noise in `in_phase`, carrier = 1 (channels,).
+    sigma: standard deviation of what disturbs `in_phase` (reception noise, impulses, other carriers), as the
+        quadrature shows it, carrier = 1 (channels,).
     phase: carrier phase less that of the nominal carrier, rad, unwrapped while locked, float64
         (channels, steps), at the middle of `steps` equal parts of the hop.
     offset_hz: carrier frequency less the nominal one, as the loop holds it (channels,).
     searched: enough has been heard to say whether there is a carrier (channels,).
     locked: the carrier loop holds a carrier (channels,).
-    settled: locked, and the carrier's average is full (channels,).
+    settled: locked, and enough has been averaged for the amplitude to be exact (channels,).
     broken: the carrier was interrupted within this hop (channels,).
     """
 

@@ -13,7 +13,9 @@ CHECKS = (
 
 def main() -> int:
     """Run them all, in the order of how soon they tell something; the exit code is 0 only if all passed."""
-    failed = [check for check in CHECKS if subprocess.run([sys.executable, "-m", *check], check=False).returncode]
+    failed = [
+        check for check in CHECKS if subprocess.run([sys.executable, "-m", *check], check=False).returncode
+    ]
     for check in failed:
         print(f"failed: {' '.join(check)}", file=sys.stderr)
     return 1 if failed else 0

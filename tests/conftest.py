@@ -13,7 +13,11 @@ def run_monitord() -> Callable[..., subprocess.CompletedProcess[str]]:
 
     def run(*words: str) -> subprocess.CompletedProcess[str]:
         return subprocess.run(
-            [sys.executable, "-m", "monitord", *words], capture_output=True, text=True, timeout=60, check=False
+            [sys.executable, "-m", "monitord", *words],
+            capture_output=True,
+            text=True,
+            timeout=60,
+            check=False,
         )
 
     return run

@@ -137,7 +137,12 @@ def subscribed(sender: zmq.Socket) -> None:
 
 
 def send_in_real_time(
-    sender: zmq.Socket, samples: np.ndarray, rate_hz: float, chunk: int = 2400, *, stop: threading.Event | None = None
+    sender: zmq.Socket,
+    samples: np.ndarray,
+    rate_hz: float,
+    chunk: int = 2400,
+    *,
+    stop: threading.Event | None = None,
 ) -> float:
     """Send cf32 at the pace of its rate; returns the monotonic time at which sample 0 was due."""
     begin = time.monotonic()

@@ -85,7 +85,9 @@ def test_a_stream_is_measured_a_burst_told_within_300_ms_and_a_cut_carrier_withi
             assert good["modulation_negative_peak_ratio", "air"] == pytest.approx(0.5, abs=0.02)
             assert first["carrier_present", "air"] == 1
 
-            told = station.wait_for(lambda page: page["overmodulation_events_total", "air", "negative"] == 1, 6)
+            told = station.wait_for(
+                lambda page: page["overmodulation_events_total", "air", "negative"] == 1, 6
+            )
             assert time.monotonic() - sending.begin - 5.0 < 0.3
             assert told["alarm_active", "overmodulation-negative", "air"] == 1
 
@@ -139,7 +141,9 @@ def test_messages_that_were_not_agreed_are_counted_and_cost_nothing(tmp_path):
         sender.send_multipart([b"two", b"frames"])
         with Sending(sender, good):
             page = station.wait_for(lambda page: page["reading_valid", "air"] == 1)
-        rejected = {key[1]: value for key, value in page.items() if key[0] == "source_rejected_messages_total"}
+        rejected = {
+            key[1]: value for key, value in page.items() if key[0] == "source_rejected_messages_total"
+        }
         assert sum(rejected.values()) == 3
         assert rejected["non-finite"] == 1
         assert page["carrier_level_dbfs", "air"] == pytest.approx(-20.0, abs=0.02)
@@ -172,5 +176,3 @@ def test_an_hf_voice_off_the_air_reads_as_its_index_says(tmp_path, run_monitord)
     assert page["carrier_frequency_offset_hertz", "air"] == pytest.approx(-31.7, abs=0.05)
     assert page["modulation_positive_peak_ratio", "air"] == pytest.approx(0.627, abs=0.015)
     assert page["modulation_negative_peak_ratio", "air"] == pytest.approx(0.877, abs=0.015)
-
-

@@ -1,13 +1,13 @@
 """WAV, RF64 and FLAC recordings: IQ in two audio channels, or a real IF in one."""
 
-import struct
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import soundfile
 from numpy.typing import NDArray
 
-from monitord.acquire.samples import FORMATS, SampleFormat, integer_format
+from monitord.acquire.samples import SampleFormat, integer_format
 from monitord.acquire.sigmf import Piece
 from monitord.errors import RecordingError
 
@@ -43,7 +43,9 @@ class AudioFile:
     def __init__(self, path: Path, wiring: str | None) -> None:
         self._path = path
         missing = _missing_bytes(path)
-        self.shortfall = f"is truncated: {missing} bytes that its header promises are missing" if missing else ""
+        self.shortfall = (
+            f"is truncated: {missing} bytes that its header promises are missing" if missing else ""
+        )
         try:
             self._file = soundfile.SoundFile(str(path))
         except (soundfile.SoundFileError, TypeError):  # TypeError: a name that ends in .raw
@@ -59,7 +61,9 @@ class AudioFile:
     def _examine(self, wiring: str | None) -> None:
         if self._file.format not in CONTAINERS or self._file.subtype not in _ENCODINGS:
             held = f"{self._file.format} with {self._file.subtype}"
-            raise RecordingError(f"{self._path}: holds {held}; must be WAV, RF64 or FLAC with PCM or float samples")
+            raise RecordingError(
+                f"{self._path}: holds {held}; must be WAV, RF64 or FLAC with PCM or float samples"
+            )
         if self._file.frames == 0:
             raise RecordingError(f"{self._path}: holds no samples")
         self.rate_hz = float(self._file.samplerate)
@@ -79,7 +83,9 @@ class AudioFile:
         if channels > 2:
             raise RecordingError(f"{self._path}: has {channels} audio channels; must be one or two")
         if channels == 1 and wiring == "iq":
-            raise RecordingError(f'{self._path}: has one audio channel; {needed} (a real IF: wiring = "left")')
+            raise RecordingError(
+                f'{self._path}: has one audio channel; {needed} (a real IF: wiring = "left")'
+            )
         if channels == 1 and wiring == "right":
             raise RecordingError(f'{self._path}: has one audio channel; {needed} (must be "left")')
         return {"iq": None, "left": 0, "right": 1}[wiring]
@@ -110,7 +116,7 @@ class AudioFile:
 
 def _stored(name: str, read_as: str, real: bool, bits: int) -> SampleFormat:
     if read_as.startswith("float"):
-        return FORMATS[f"{name}_le"] if bits == 32 else FORMATS[f"{name}_le"]
+        return SampleFormat(name, np.dtype(read_as), real)
     return integer_format(name, read_as, real, bits)
 
 
@@ -126,7 +132,7 @@ def _missing_bytes(path: Path) -> int:
             return 0
         long_size = 0
         while len(chunk := file.read(8)) == 8:
-            name, length = struct.unpack("<4sI", chunk)
+            name, length = chunk[:4], int.from_bytes(chunk[4:], "little")
             begin = file.tell()
             if name == b"data":
                 if length == _UNKNOWN_LENGTH:

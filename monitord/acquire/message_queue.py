@@ -2,14 +2,13 @@
 
 import threading
 from collections import deque
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
 
 from monitord.acquire.samples import SampleFormat
 from monitord.errors import SourceLost
 
 QUEUE_S = 2.0
-GATHER_S = 0.02
-"""Small messages are gathered this long, so that the chain need not run for each of them."""
 BLOCK_S = 0.1
 
 
@@ -49,23 +48,20 @@ class MessageQueue:
 
     def __init__(self, rate_hz: float) -> None:
         self._capacity = QUEUE_S * rate_hz
-        self._enough = GATHER_S * rate_hz
         self._most = BLOCK_S * rate_hz
         self._changed = threading.Condition()
         self._entries: deque[Entry] = deque()
         self._frames = 0
         self._failure = ""
 
-    def put(self, entry: Entry) -> None:
+    def put(self, entries: Iterable[Entry]) -> None:
         """Add what has just come."""
         with self._changed:
-            if self._entries and self._frames + entry.frames > self._capacity:
-                entry = self._overrun(entry)
-            before = self._frames
-            self._entries.append(entry)
-            self._frames += entry.frames
-            if not before or before < self._enough <= self._frames:  # the reader waits for these two only
-                self._changed.notify_all()
+            for entry in entries:
+                full = self._entries and self._frames + entry.frames > self._capacity
+                self._entries.append(self._overrun(entry) if full else entry)
+                self._frames += entry.frames
+            self._changed.notify_all()
 
     def _overrun(self, entry: Entry) -> Entry:
         ended = sum(old.frames for old in self._entries if old.stream != entry.stream)
@@ -91,20 +87,22 @@ class MessageQueue:
 
         Returns an empty list where none came in time. Raises SourceLost after `fail`.
         """
-        patience = max(timeout_s, 0.0)
         with self._changed:
-            self._changed.wait_for(lambda: self._entries or self._failure, patience)
+            self._changed.wait_for(lambda: self._entries or self._failure, max(timeout_s, 0.0))
             if not self._entries:
                 if self._failure:
                     raise SourceLost(self._failure)
                 return []
-            self._changed.wait_for(lambda: self._frames >= self._enough, min(GATHER_S, patience))
             return self._run()
 
     def _run(self) -> list[Entry]:
         first = self._entries.popleft()
         run, frames = [first], first.frames
-        while self._entries and frames + self._entries[0].frames <= self._most and self._entries[0].follows(first):
+        while (
+            self._entries
+            and frames + self._entries[0].frames <= self._most
+            and self._entries[0].follows(first)
+        ):
             frames += self._entries[0].frames
             run.append(self._entries.popleft())
         self._frames -= frames

@@ -3,6 +3,7 @@
 import time
 from math import isclose
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from monitord.acquire.samples import Decoded
 from monitord.acquire.sigmf import Piece, SigmfFile
@@ -11,11 +12,12 @@ from monitord.errors import RecordingError
 from monitord.settings import Source
 from monitord.stage import SourceCounts
 
-BLOCK_S = 0.1
-MOST_FRAMES = 2**20
-
 if TYPE_CHECKING:
     from monitord.acquire.audiofile import AudioFile
+
+BLOCK_S = 0.1
+MOST_FRAMES = 2**20
+"""No block is longer, however high the rate."""
 
 
 def open_recording(path: Path, wiring: str | None) -> "SigmfFile | AudioFile":
@@ -86,14 +88,17 @@ class RecordingSource:
         said = self.settings
         if said.sample_rate_hz is not None and not isclose(said.sample_rate_hz, self.rate_hz, rel_tol=1e-9):
             raise self._disagreement("sample_rate_hz", f"{said.sample_rate_hz:.12g}", f"{self.rate_hz:.12g}")
-        if said.datatype is not None and _plain(said.datatype) != _plain(file.datatype):
+        orders = ("", "_le", "_be")  # an audio file's byte order is its own affair: its datatype bears none
+        if said.datatype is not None and said.datatype not in [f"{file.datatype}{order}" for order in orders]:
             raise self._disagreement("datatype", f'"{said.datatype}"', f'"{file.datatype}"')
         right_hz = 0.0 if self.real else self.center_hz
         if said.center_hz is not None and not isclose(said.center_hz, right_hz, rel_tol=1e-9, abs_tol=1e-6):
             raise self._disagreement("center_hz", f"{said.center_hz:.12g}", f"{right_hz:.12g}")
 
     def _disagreement(self, key: str, said: str, right: str) -> RecordingError:
-        return RecordingError(f"{self._path}: source.{key} = {said}: must be {right} for this recording, or left out")
+        return RecordingError(
+            f"{self._path}: source.{key} = {said}: must be {right} for this recording, or left out"
+        )
 
     def close(self) -> None:
         """Let go of the file."""
@@ -127,17 +132,46 @@ class RecordingSource:
     def _next(self) -> Block | None:
         if self._ended or self._file is None:
             return None
-        piece = None if self._failure else self._read(self._file)
+        piece = None if self._failure else self._piece(self._file)
         if piece is None:
-            self._finish(self._file)
+            self._finish(self._file.shortfall)
             return None
         decoded = self._file.format.interpret(piece.codes)
-        if decoded.first_bad is None:
-            return self._block(piece, decoded)
-        bad = piece.start + decoded.first_bad
-        self._failure = (
-            f"sample {bad} ({bad / self.rate_hz:.3f} s) is not a finite number; all before it has been taken"
+        if decoded.first_bad is not None:
+            at = piece.start + decoded.first_bad
+            self._failure = (
+                f"sample {at} (at {at / self.rate_hz:.6g} s) is not a usable number; must be finite"
+            )
+            if decoded.first_bad == 0:
+                self._finish("")
+            decoded = self._file.format.interpret(
+                piece.codes[: decoded.first_bad * self._file.format.components]
+            )
+        return self._block(piece, decoded)
+
+    def _piece(self, file: "SigmfFile | AudioFile") -> Piece | None:
+        try:
+            return file.read(max(1, min(round(BLOCK_S * self.rate_hz), MOST_FRAMES)))
+        except OSError as error:
+            self._failure = f"cannot be read on: {error.strerror}"
+            return None
+
+    def _finish(self, shortfall: str) -> None:
+        """Come to the end. Raises RecordingError where it is not the end that it should have."""
+        self._ended = True
+        failure = self._failure or shortfall
+        if failure:
+            raise RecordingError(f"{self._path}: {failure}")
+
+    def _block(self, piece: Piece, decoded: Decoded) -> Block:
+        lost, self._end = piece.start - self._end, piece.start + len(decoded.samples)
+        return Block(
+            samples=decoded.samples,
+            rate_hz=self.rate_hz,
+            center_hz=self.center_hz,
+            start=piece.start,
+            utc=piece.utc,
+            lost=lost,
+            lost_reason="sequence" if lost else "",
+            clipped=decoded.clipped,
         )
-        if decoded.first_bad == 0:
-            self._finish(self._file)
-        return self._block(piece, self._file.format.interpret(piece.codes[: decoded.first_bad * size]))

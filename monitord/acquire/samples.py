@@ -72,7 +72,7 @@ class SampleFormat:
     def _integers(self, codes: NDArray[Any]) -> Decoded:
         wide = self.component.itemsize > 2  # more digits than float32 holds
         half = 2.0 ** (8 * self.component.itemsize - 1)
-        values = codes.astype(np.float64 if wide else np.float32)
+        values: NDArray[np.floating[Any]] = codes.astype(np.float64 if wide else np.float32)
         if self.component.kind == "u":
             values -= half
         values *= 1 / half
@@ -84,7 +84,7 @@ class SampleFormat:
     def _floats(self, codes: NDArray[Any]) -> Decoded:
         with np.errstate(all="ignore"):  # NaN and overflow are looked for below
             values = codes.astype(np.float32, copy=False)
-            if -1 < values.min() and values.max() < 1:  # false for NaN
+            if values.min() > -1 and values.max() < 1:  # false for NaN
                 return Decoded(self._samples(values))
             size = np.abs(values)
             usable = size <= LARGEST

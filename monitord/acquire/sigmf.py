@@ -5,14 +5,13 @@ Source: SigMF specification 1.2 (global object, captures array, Dataset format).
 
 import json
 from dataclasses import dataclass
-from math import isfinite
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from monitord.acquire.samples import FORMATS, parse_time, sample_format
+from monitord.acquire.samples import FORMATS, SampleFormat, parse_time, sample_format
 from monitord.errors import RecordingError
 
 LARGEST_NUMBER = 2**53
@@ -58,12 +57,11 @@ class SigmfFile:
         captures = fields.get("captures", [])
         if not isinstance(captures, list):
             raise self._error("captures must be an array")
-        self._captures = [self._object(capture, f"captures[{k}]") for k, capture in enumerate(captures)] or [{}]
-        self.datatype = str(self._global.get("core:datatype"))
-        form = sample_format(self.datatype)
-        if form is None:
-            raise self._error(f'core:datatype is "{self.datatype[:40]}"; must be one of {", ".join(FORMATS)}')
-        self.format = form
+        self._captures = [self._object(capture, f"captures[{k}]") for k, capture in enumerate(captures)] or [
+            {}
+        ]
+        self.format = self._format()
+        self.datatype = self.format.name
         self._check_layout()
         self.rate_hz = self._rate()
         self.center_hz = self._center()
@@ -112,6 +110,13 @@ class SigmfFile:
             raise self._error(f"not a SigMF recording: {name} must be a JSON object")
         return value
 
+    def _format(self) -> SampleFormat:
+        datatype = str(self._global.get("core:datatype"))
+        form = sample_format(datatype)
+        if form is None:
+            raise self._error(f'core:datatype is "{datatype[:40]}"; must be one of {", ".join(FORMATS)}')
+        return form
+
     def _check_layout(self) -> None:
         if self._integer(self._global, "core:num_channels", 1) != 1:
             raise self._error("core:num_channels must be 1: only one stream can be read at a time")
@@ -127,7 +132,9 @@ class SigmfFile:
     def _center(self) -> float | None:
         said = {self._number(capture, "core:frequency", None) for capture in self._captures} - {None}
         if len(said) > 1:
-            raise self._error("core:frequency changes between captures; must be one, split the recording there")
+            raise self._error(
+                "core:frequency changes between captures; must be one, split the recording there"
+            )
         center_hz = said.pop() if said else None
         if self.format.real and center_hz:
             raise self._error(f"core:frequency is {center_hz:.12g}; must be 0 or left out for a real IF")
@@ -139,7 +146,7 @@ class SigmfFile:
             return None
         if isinstance(value, bool) or not isinstance(value, int | float) or not 0 <= value <= LARGEST_NUMBER:
             raise self._error(f"{key} is {str(value)[:40]}; must be a number in 0..2^53")
-        return float(value) if isfinite(value) else None
+        return float(value)
 
     def _integer(self, fields: dict[str, Any], key: str, default: int) -> int:
         number = self._number(fields, key, default)
@@ -157,7 +164,9 @@ class SigmfFile:
     def _data_path(self) -> Path:
         name = self._global.get("core:dataset", self._meta.with_suffix(".sigmf-data").name)
         if not isinstance(name, str) or name in ("", ".", "..") or Path(name).name != name or "\\" in name:
-            raise self._error(f"core:dataset is {str(name)[:80]!r}; must be a plain file name in the same folder")
+            raise self._error(
+                f"core:dataset is {str(name)[:80]!r}; must be a plain file name in the same folder"
+            )
         path = self._meta.with_name(name)
         if not path.is_file():
             raise self._error(f"its samples are missing: there is no file {path}")
@@ -165,32 +174,42 @@ class SigmfFile:
 
     def _lay_out(self, size: int) -> list[_Segment]:
         """Find each capture's samples in the data file, of `size` bytes."""
-        width = self.format.sample_bytes
-        first = self._integer(self._global, "core:offset", 0)
+        width, begins = self.format.sample_bytes, self._begins()
         payload = size - self._integer(self._global, "core:trailing_bytes", 0)
-        begins = [self._integer(capture, "core:sample_start", first) - first for capture in self._captures]
-        if begins != sorted(begins) or begins[0] < 0:
-            raise self._error("core:sample_start must not fall from capture to capture, nor be below core:offset")
+        indices = self._indices(begins)
         segments: list[_Segment] = []
-        headers, start, index = 0, 0, self._global_index(self._captures[0], begins[0] + first)
-        for k, (capture, begin) in enumerate(zip(self._captures, begins, strict=True)):
+        headers, odd = 0, 0
+        for k, capture in enumerate(self._captures):
             headers += self._integer(capture, "core:header_bytes", 0)
-            offset = begin * width + headers
+            offset = begins[k] * width + headers
             there, odd = divmod(max(payload - offset, 0), width)
-            promised = begins[k + 1] - begin if k + 1 < len(begins) else there
-            begun = self._global_index(capture, index + start) - index
-            if begun < start:
-                raise self._error(f"captures[{k}]: core:global_index falls back into the capture before")
-            segments.append(_Segment(offset, min(there, promised), begun, self._utc(capture)))
-            start = begun + promised
-            self._note_shortfall(there, promised, odd if k + 1 == len(begins) else 0)
+            frames = there if k + 1 == len(begins) else min(there, begins[k + 1] - begins[k])
+            segments.append(_Segment(offset, frames, indices[k], self._utc(capture)))
+        missing = begins[-1] - begins[0] - sum(segment.frames for segment in segments[:-1])
+        if missing:
+            self.shortfall = f"is truncated: {missing} samples that its captures promise are missing"
+        elif odd:
+            self.shortfall = f"is truncated: it ends with {odd} bytes of a sample of {width}"
         return segments
 
-    def _global_index(self, capture: dict[str, Any], default: int) -> int:
-        return self._integer(capture, "core:global_index", default)
+    def _begins(self) -> list[int]:
+        """Where each capture begins, counted in samples from the beginning of the data."""
+        first = self._integer(self._global, "core:offset", 0)
+        begins = [self._integer(capture, "core:sample_start", first) - first for capture in self._captures]
+        if begins != sorted(begins) or begins[0] < 0:
+            raise self._error(
+                "core:sample_start must not fall from capture to capture, nor be below core:offset"
+            )
+        return begins
 
-    def _note_shortfall(self, there: int, promised: int, odd: int) -> None:
-        if there < promised:
-            self.shortfall = f"is truncated: {promised - there} samples that its captures promise are missing"
-        elif odd:
-            self.shortfall = f"is truncated: it ends with {odd} bytes of a sample of {self.format.sample_bytes}"
+    def _indices(self, begins: list[int]) -> list[int]:
+        """Index of each capture's first sample since the recording began: gaps are counted in it."""
+        origin = index = self._integer(self._captures[0], "core:global_index", 0)
+        indices = [0]
+        for k, capture in enumerate(self._captures[1:], 1):
+            follows = index + begins[k] - begins[k - 1]
+            index = self._integer(capture, "core:global_index", follows)
+            if index < follows:
+                raise self._error(f"captures[{k}]: core:global_index falls back into the capture before")
+            indices.append(index - origin)
+        return indices

@@ -7,6 +7,8 @@ depend on the settings alone: every start gives the same ones.
 import time
 from collections.abc import Sequence
 
+import numpy as np
+
 from monitord.acquire.transmitters import Air
 from monitord.blocks import Block
 from monitord.errors import SourceLost
@@ -14,6 +16,8 @@ from monitord.settings import Channel, Source
 from monitord.stage import SourceCounts
 
 BLOCK_S = 0.05
+
+_AHEAD_FRAMES = 9_600  # made at one go where blocks are short: many small steps cost more than one large one
 
 
 def builtin_channels() -> tuple[Channel, ...]:
@@ -40,6 +44,9 @@ class SimulatedSource:
         assert settings.sample_rate_hz is not None and settings.center_hz is not None  # defaults of this kind
         self._rate_hz, self._center_hz = settings.sample_rate_hz, settings.center_hz
         self._frames = max(1, round(BLOCK_S * self._rate_hz))
+        self._ahead = max(1, _AHEAD_FRAMES // self._frames) * self._frames
+        self._made = np.zeros(0, np.complex64)  # samples not yet handed over, the next of them first
+        self._next = 0
         self._air: Air | None = None
         self._openings = 0
         self._began_s = self._began_utc = 0.0
@@ -55,6 +62,7 @@ class SimulatedSource:
         Opened again, it is a new stream.
         """
         self._air = Air(self._channels, self._rate_hz, self._center_hz)
+        self._made, self._next = np.zeros(0, np.complex64), 0
         self._openings += 1
         self._began_s, self._began_utc = time.monotonic(), time.time()
 
@@ -63,14 +71,17 @@ class SimulatedSource:
 
         A late reader gets all that is due, without loss. Raises SourceLost if the source is not open.
         """
-        air = self._air
-        if air is None:
+        if self._air is None:
             raise SourceLost("source: the simulated station is not open; open it before reading")
-        if not self._due(air.next + self._frames, timeout_s):
+        if not self._due(self._next + self._frames, timeout_s):
             return None
-        start = air.next
+        if not len(self._made):
+            self._made = self._air.receive(self._ahead)
+        samples, self._made = np.split(self._made, [self._frames])
+        start = self._next
+        self._next += self._frames
         return Block(
-            samples=air.receive(self._frames),
+            samples=samples,
             rate_hz=self._rate_hz,
             center_hz=self._center_hz,
             start=start,

@@ -18,6 +18,9 @@ from monitord.stage import SourceCounts
 log = logging.getLogger("monitord.source")
 
 LOG_EVERY_S = 60.0
+GATHER_S = 0.03
+"""Messages shorter than this are left to gather for as long: waking up for each costs more than taking it."""
+MOST_MESSAGES = 1000
 LONGEST_FRAME = 64 * 2**20
 KEPT_FRAMES = 4
 """One more than any framing has: a longer message is wrong anyway, and need not be held in memory."""
@@ -45,7 +48,9 @@ class _Rejections:
 class _Receiver:
     """What the receiving thread does. Its memory outlives the thread: a socket opened again goes on counting."""
 
-    def __init__(self, framing: Framing, queue: MessageQueue, counts: SourceCounts, rejections: _Rejections) -> None:
+    def __init__(
+        self, framing: Framing, queue: MessageQueue, counts: SourceCounts, rejections: _Rejections
+    ) -> None:
         self._framing = framing
         self._queue = queue
         self._counts = counts
@@ -54,6 +59,7 @@ class _Receiver:
         self._clock = ArrivalClock(framing.rate_hz)
         self._connections = 0
         self._connected_anew = True
+        self._gather = False
         self._stream = 0
 
     def run(self, socket: "zmq.Socket[bytes]", monitor: "zmq.Socket[bytes]") -> None:
@@ -63,13 +69,10 @@ class _Receiver:
         poller.register(monitor, zmq.POLLIN)
         try:
             while True:
-                ready = dict(poller.poll())
-                # Asked after the poll: a connection's event is there before its first message is.
-                while monitor.get(zmq.EVENTS) & zmq.POLLIN:
-                    monitor.recv_multipart()
-                    self._connected()
-                if socket in ready:
-                    self._take(_receive(socket), time.time())
+                poller.poll()
+                if self._gather:
+                    time.sleep(GATHER_S)
+                self._queue.put(self._drain(socket, monitor))
         except zmq.ContextTerminated:
             pass
         except Exception as error:  # whatever it was: a source that died must not look like a quiet one
@@ -79,38 +82,52 @@ class _Receiver:
             monitor.close(linger=0)
             socket.close(linger=0)
 
+    def _drain(self, socket: "zmq.Socket[bytes]", monitor: "zmq.Socket[bytes]") -> list[Entry]:
+        """Take what has arrived, within reason."""
+        taken = []
+        for _ in range(MOST_MESSAGES):
+            waiting = int(socket.get(zmq.EVENTS)) & zmq.POLLIN
+            # Asked in this order: a connection's event is there before its first message is.
+            while int(monitor.get(zmq.EVENTS)) & zmq.POLLIN:
+                monitor.recv_multipart()
+                self._connected()
+            if not waiting:
+                break
+            entry = self._accept(_receive(socket), time.time())
+            if entry is not None:
+                taken.append(entry)
+        return taken
+
     def _connected(self) -> None:
         self._connections += 1
         self._connected_anew = True
         if self._connections > 1:
             self._counts.reconnects += 1
 
-    def _take(self, frames: list[bytes], arrival: float) -> None:
+    def _accept(self, frames: list[bytes], arrival: float) -> Entry | None:
         try:
             message = self._framing.parse(frames)
             place = self._sequence.place(message.start, message.frames, self._connected_anew)
         except MessageError as problem:
             self._rejections.add(problem.reason, str(problem))
-            return
+            return None
         if place.stream != self._stream:
             self._stream = place.stream
             if not self._connected_anew:  # else it has been counted with the connection
                 self._counts.reconnects += 1
         self._connected_anew = False
+        self._gather = message.frames < GATHER_S * self._framing.rate_hz
         jump = place.start == 0 or place.lost > 0
         utc = self._clock.stamp(message.frames, arrival, jump) if message.utc is None else message.utc
-        gap = "sequence" if place.lost else ""
-        self._queue.put(
-            Entry(
-                data=message.data,
-                frames=message.frames,
-                form=message.form,
-                center_hz=message.center_hz,
-                start=place.start,
-                stream=place.stream,
-                utc=utc,
-                gap=gap,
-            )
+        return Entry(
+            data=message.data,
+            frames=message.frames,
+            form=message.form,
+            center_hz=message.center_hz,
+            start=place.start,
+            stream=place.stream,
+            utc=utc,
+            gap="sequence" if place.lost else "",
         )
 
 

@@ -24,6 +24,7 @@ _BREAK_STEPS = 5  # 20 ms at less than a tenth: longer than any trough of progra
 _BREAK_BELOW = 0.1
 _NOISE_SMOOTHING = 0.2
 _MOST_ANGLE = 1.0
+_SETTLED_HOPS = 5  # the carrier's mean is exact from half a second on
 _LEAST_AMPLITUDE = 1e-12  # -240 dBFS: keeps the divisions by an amplitude defined where there is none
 
 Steps = NDArray[np.complex128]
@@ -79,14 +80,13 @@ class CarrierRecovery:
         """Forget everything: as new."""
         count = self._channels
         self._search = LineSearch(count, self._rate_hz, self._frames, STEPS, self._acquire_hz)
-        self._mean = TaperedMean(count, self._frames, self._average_hops)
+        self._mean = TaperedMean(count, self._frames, self._average_hops, STEPS)
         self._phase = np.zeros(count)
         self._speed = np.zeros(count)  # rad/s
         self._amplitude = np.zeros(count)  # of the last hops, for the loop
         self._tracking = np.zeros(count, bool)
         self._good = np.zeros(count, np.int64)
         self._bad = np.zeros(count, np.int64)
-        self._age = np.zeros(count, np.int64)
         self._low_run = np.zeros(count, np.int64)
         self._smooth_noise = np.full(count, np.nan)
 
@@ -97,15 +97,17 @@ class CarrierRecovery:
         samples, phase = self._rotate(baseband.samples, path)
         steps *= np.exp(-1j * (path[:, :-1] + path[:, 1:]) / 2)
         line = steps.mean(axis=1)
-        noise = with_floor(self._noise.density(samples.imag), np.abs(line))
+        noise, disturbance = self._noise.density(samples.imag)
+        noise = with_floor(noise, np.abs(line))
         broken = self._breaks(steps.real)
         self._judge(line, noise)
         self._average(samples, broken)
         self._advance(path[:, -1], speed_change, line)
         locked = self._tracking & (self._good >= _CONFIRMED_AFTER)
-        settled = locked & (self._age > self._average_hops) & (self._mean.filled > 0.5)
+        settled = locked & (self._mean.heard >= min(_SETTLED_HOPS, self._average_hops))
         amplitude = np.where(locked, self._mean.mean, np.nan)
-        sigma = np.sqrt(np.fmax(noise, self._smooth_noise) * self._noise_hz) / amplitude
+        spread = np.maximum(np.maximum(noise, disturbance), self._smooth_noise)
+        sigma = np.sqrt(spread * self._noise_hz) / amplitude
         carrier = Carrier(
             samples=samples,
             rate_hz=self._rate_hz,
@@ -135,7 +137,7 @@ class CarrierRecovery:
     def _angles(self, steps: Steps) -> Precise:
         """Phase errors for the loop; none where nothing is tracked or the line has just gone (it coasts)."""
         use = self._tracking & (self._bad == 0)
-        angle = steps.imag * (use / np.maximum(self._amplitude, _LEAST_AMPLITUDE))[:, None]
+        angle: Precise = steps.imag * (use / np.maximum(self._amplitude, _LEAST_AMPLITUDE))[:, None]
         return np.minimum(np.maximum(angle, -_MOST_ANGLE), _MOST_ANGLE)
 
     def _rotate(self, samples: Complex, path: Precise) -> tuple[Complex, Precise]:
@@ -154,8 +156,7 @@ class CarrierRecovery:
 
     def _breaks(self, steps: Precise) -> Flags:
         """Rows whose carrier was cut within this hop, counting a cut that began in the hop before."""
-        mean = self._mean.mean
-        low = steps < _BREAK_BELOW * np.where(np.isfinite(mean), mean, 0)[:, None]
+        low = steps < _BREAK_BELOW * self._amplitude[:, None]
         if not low.any():
             self._low_run[:] = 0
             return np.zeros(self._channels, bool)
@@ -174,8 +175,6 @@ class CarrierRecovery:
         away = np.abs(self._speed) / (2 * np.pi) > 1.05 * self._acquire_hz + 2
         lost = self._tracking & ((self._bad >= _CONFIRMED_AFTER) | away)
         self._tracking = self._tracking & ~lost
-        self._mean.forget(lost)
-        self._age = np.where(self._tracking, self._age + 1, 0)
         smooth = self._smooth_noise + _NOISE_SMOOTHING * (noise - self._smooth_noise)
         self._smooth_noise = np.where(np.isfinite(smooth), smooth, noise)
 
@@ -204,4 +203,4 @@ class CarrierRecovery:
         self._tracking = self._tracking | new
         self._good[new] = 0
         self._bad[new] = 0
-        self._age[new] = 0
+        self._mean.begin(new, line.in_phase[line.found], line.steady[line.found])

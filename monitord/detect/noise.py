@@ -25,16 +25,18 @@ class QuadratureNoise:
         power = float(np.sum(np.square(self._window, dtype=np.float64)))
         self._scale = 2 / (rate_hz * power * np.log(2))
 
-    def density(self, quadrature: Real) -> Precise:
-        """Power per Hz of the complex baseband, full scale = 1, float64 (channels,).
+    def density(self, quadrature: Real) -> tuple[Precise, Precise]:
+        """Power per Hz of the complex baseband, full scale = 1: median and mean over the bins, float64 (channels,).
 
+        The median is that of the reception noise; the mean has all that disturbs, impulses and lines too.
         quadrature: float32 (channels, frames), full scale = 1.
         """
         spectrum = scipy.fft.rfft(quadrature * self._window, axis=1)[:, self._bins]
         power = np.square(spectrum.real) + np.square(spectrum.imag)
+        mean = power.mean(axis=1, dtype=np.float64) * (self._scale * np.log(2))
         middle = power.shape[1] // 2
         power.partition(middle, axis=1)
-        return power[:, middle].astype(np.float64) * self._scale
+        return np.asarray(power[:, middle] * self._scale, np.float64), mean
 
 
 def with_floor(density: Precise, amplitude: Precise) -> Precise:

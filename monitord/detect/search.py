@@ -8,12 +8,14 @@ from dataclasses import dataclass
 
 import numpy as np
 import scipy.fft
+from numpy.typing import NDArray
 
 from monitord.blocks import Complex, Flags, Precise
 
 HOPS = 4
 _CLEAR_OF_MEDIAN = 100.0
 _ZERO_PADDING = 4
+_SAME_LEVEL = 0.1
 
 
 @dataclass(frozen=True, slots=True)
@@ -24,12 +26,16 @@ class Line:
     offset_hz: its frequency (rows,).
     phase: its phase at the end of the stretch searched, rad (rows,).
     amplitude: its amplitude, full scale = 1 (rows,).
+    in_phase: the stretch searched, turned to the line's phase, mean of each step (rows, HOPS * steps).
+    steady: hops of that stretch, from the last one back, in which the line stood as it does now (rows,).
     """
 
     found: Flags
     offset_hz: Precise
     phase: Precise
     amplitude: Precise
+    in_phase: Precise
+    steady: NDArray[np.int64]
 
 
 class LineSearch:
@@ -42,6 +48,7 @@ class LineSearch:
         count = HOPS * parts
         self._past: Complex = np.zeros((channels, count), np.complex64)
         self._parts = parts
+        self._steps = steps
         self._heard = np.zeros(channels, np.int64)
         self._window = np.hanning(count + 1)[:-1]
         size = _ZERO_PADDING * count
@@ -78,9 +85,20 @@ class LineSearch:
         shift = np.where(bend < 0, (low - high) / np.where(bend < 0, 2 * bend, 1), 0)
         offset_hz = self._offset_hz[self._near[best]] + shift * self.rate_hz / len(self._offset_hz)
         turn = np.exp(-2j * np.pi * offset_hz[:, None] * self._time)
-        line = np.sum(wave * turn, axis=1) / self._window.sum() / np.sinc(offset_hz / self.rate_hz)
+        droop = np.sinc(offset_hz / self.rate_hz)
+        line = np.sum(wave * turn, axis=1) / self._window.sum() / droop
         found = near[row, best] > _CLEAR_OF_MEDIAN * np.median(power, axis=1)
-        return Line(found, offset_hz, np.angle(line), np.abs(line))
+        turned = (self._past[rows] * turn * np.exp(-1j * np.angle(line))[:, None]).real
+        in_phase = turned.reshape(len(line), HOPS * self._steps, -1).mean(axis=2) / droop[:, None]
+        return Line(found, offset_hz, np.angle(line), np.abs(line), in_phase, _steady_hops(in_phase))
+
+
+def _steady_hops(in_phase: Precise) -> NDArray[np.int64]:
+    """Hops from the last back that have its mean within a tenth, less the one in which the line may have begun."""
+    level = in_phase.reshape(len(in_phase), HOPS, -1).mean(axis=2)
+    same = np.abs(level / level[:, -1:] - 1) < _SAME_LEVEL
+    run = np.where(same.all(axis=1), HOPS, np.argmin(same[:, ::-1], axis=1) - 1)
+    return np.asarray(np.maximum(run, 0))
 
 
 def _longest_part(frames: int, steps: int, rate_hz: float, needed_hz: float) -> int:

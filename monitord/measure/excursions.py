@@ -62,6 +62,7 @@ class ExcursionMeter:
     def reset(self) -> None:
         """See stage.Meter."""
         count = len(self._bank.channels)
+        self._usable = np.zeros(count, bool)
         self._tail: Real = np.full((count, self._keep), np.nan, np.float32)
 
     def reading(self) -> Mapping[str, Precise]:
@@ -70,7 +71,8 @@ class ExcursionMeter:
 
     def process(self, detected: Detected) -> Mapping[str, Precise]:
         """See stage.Meter."""
-        judged = detected.settled & ~detected.broken & peaks_mean_something(detected, self._bank)
+        usable = detected.settled & ~detected.broken & peaks_mean_something(detected, self._bank)
+        judged, self._usable = usable & self._usable, usable  # a trough may have begun in the hop before
         clear = np.maximum(CLEAR_SIGMA * detected.sigma, _CLEAR_LEAST)
         over_s, over_span_s = self._above(detected, judged, clear)
         under = self._below(detected, judged, clear)

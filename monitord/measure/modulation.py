@@ -62,6 +62,7 @@ class ModulationMeter:
         self._bank = bank
         self._window = round(WINDOW_S / bank.hop_s)
         self._slots = round(RECURRING_WINDOW_S / bank.hop_s)
+        self._average_hops = max(1, round(bank.channels[0].carrier_average_s / bank.hop_s))
         self.reset()
 
     def reset(self) -> None:
@@ -69,7 +70,9 @@ class ModulationMeter:
         count = len(self._bank.channels)
         self._true = TruePeaks(count, self._bank.frames)
         self._peaks = np.full((self._slots, 2, count), np.nan)  # a ring: `_place` holds the newest
+        self._raw = np.full((self._slots, 2, count), np.nan)  # the same peaks, in-phase, full scale = 1
         self._place = 0
+        self._amplitude = np.full(count, np.nan)  # of the hop before
         self._valid_hops = np.zeros(count, np.int64)
         self._begin()
 
@@ -85,19 +88,40 @@ class ModulationMeter:
         highest, lowest = self._true.find()
         usable = detected.settled & ~detected.broken
         peaks = np.where(usable & peaks_mean_something(detected, self._bank), [highest, -lowest], np.nan)
-        self._remember(peaks, detected.broken)
-        square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - np.square(detected.sigma)
+        self._remember(peaks, detected)
+        square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - self._noise_power(detected)
         self._square += np.where(usable, square, 0)
         self._square_hops += usable
         self._true.advance()
         return {"positive_peak": peaks[0], "negative_peak": peaks[1]}
 
-    def _remember(self, peaks: Precise, broken: Flags) -> None:
+    def _noise_power(self, detected: Detected) -> Precise:
+        """Variance of the reception noise in the in-phase part, carrier = 1 (channels,)."""
+        return detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
+
+    def _remember(self, peaks: Precise, detected: Detected) -> None:
         # A cut is known for sure only in the hop after the one in which it began.
-        self._peaks[self._place, :, broken] = np.nan
+        self._peaks[self._place, :, detected.broken] = np.nan
+        self._raw[self._place, :, detected.broken] = np.nan
         self._place = (self._place + 1) % self._slots
         self._peaks[self._place] = peaks
+        self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
         self._valid_hops += np.isfinite(peaks[0])
+        self._center(detected.amplitude)
+        self._amplitude = detected.amplitude
+
+    def _center(self, amplitude: Precise) -> None:
+        """Refer the peaks of half an averaging time ago to the carrier's mean around them, now that it is known.
+
+        The detector can only look back; where the carrier moves, its mean lags by half its length.
+        """
+        half = self._average_hops // 2
+        if half == 0:
+            return
+        around = amplitude if self._average_hops % 2 else (amplitude + self._amplitude) / 2
+        place = (self._place - half) % self._slots
+        centered = (self._raw[place] / around - 1) * [[1], [-1]]
+        self._peaks[place] = np.where(np.isfinite(centered), centered, self._peaks[place])
 
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""

@@ -143,9 +143,7 @@ def test_the_carriers_phase_goes_on_from_block_to_block(turn: Complex) -> None:
 
 
 @pytest.mark.parametrize("carrier_hz", [ALDER, BIRCH, CEDAR])
-def test_programme_moves_like_programme_and_stays_below_its_limits(
-    turn: Complex, carrier_hz: float
-) -> None:
+def test_programme_moves_like_programme_and_stays_below_its_limits(turn: Complex, carrier_hz: float) -> None:
     channel = heard(turn, carrier_hz, 4, 18)
     modulation = channel.envelope - 1
     assert 0.6 < -modulation.min() <= 0.96
@@ -246,9 +244,7 @@ def test_reading_before_open_or_after_close_says_so_in_one_line() -> None:
 def test_with_channels_of_ones_own_a_transmitter_is_on_each_at_any_rate(rate_hz: float) -> None:
     settings = Source(kind="simulated", sample_rate_hz=rate_hz, center_hz=1e6, pace="flat-out")
     carriers = (997_000.0, 1_002_500.0)
-    channels = [
-        Channel(name=f"mw-{hz / 1e3:g}", carrier_hz=hz, bandwidth_hz=2_000.0) for hz in carriers
-    ]
+    channels = [Channel(name=f"mw-{hz / 1e3:g}", carrier_hz=hz, bandwidth_hz=2_000.0) for hz in carriers]
     source = SimulatedSource(settings, channels)
     source.open()
     samples = received(source, 80)
