@@ -182,6 +182,11 @@ class Chain:
         for stage in ("condition", "detect", "measure", "notice", "publish"):
             tally.stage_seconds.setdefault(stage, 0.0)
 
+    @property
+    def wanted(self) -> int:
+        """Samples that complete the next hop: fewer change nothing."""
+        return self._tuner.wanted
+
     def process(self, block: Block) -> None:
         """Take one block."""
         hops = self._tuner.process(block)

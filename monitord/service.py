@@ -133,7 +133,7 @@ class Service:
     def _loop(self, source: SampleSource) -> None:
         self._heard_s = self._busy_since_s = time.monotonic()
         while not self._stop.is_set():
-            block = source.read(TICK_S)
+            block = source.read(TICK_S, self._chain.wanted if self._chain else 1)
             self._tally.reconnects = source.counts.reconnects
             if block is not None:
                 self._take(block)

@@ -196,7 +196,9 @@ def _channels(
 
 
 def _span(source: Part[Source] | None) -> Range | None:
-    if source is None or not source.sound("kind", "sample_rate_hz", "center_hz", "datatype", "wiring"):
+    if source is None or not source.sound(
+        "kind", "sample_rate_hz", "center_hz", "framing", "datatype", "wiring"
+    ):
         return None
     return known_range(source.model)
 

@@ -76,6 +76,9 @@ def known_range(source: Source) -> Range | None:
     """The span as far as the settings tell it; None where only the stream or recording can."""
     real = source.real
     center_hz = 0.0 if real else source.center_hz
+    described = source.kind == "socket" and source.framing == "described"
+    if described and not real and "center_hz" not in source.model_fields_set:
+        return None  # the messages say it
     if source.sample_rate_hz is None or center_hz is None:
         return None
     # Where the form is not known yet, the check for IQ is the one that a real IF must pass as well.

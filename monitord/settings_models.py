@@ -28,7 +28,7 @@ DATATYPES = tuple(
     f"{form}{number}{order}"
     for form in "cr"
     for number, orders in (
-        *((number, ("_le", "_be")) for number in ("f32", "f64", "i32", "i16", "u16")),
+        *((number, ("_le", "_be")) for number in ("f32", "f64", "i32", "u32", "i16", "u16")),
         *((number, ("",)) for number in ("i8", "u8")),
     )
     for order in orders
@@ -184,6 +184,7 @@ class Source(_Section):
 
     sample_rate_hz: samples per second; None only where a recording says it itself.
     center_hz: what 0 Hz of the stream stands for; None only for a recording (it says it itself, or it is 0).
+        Described messages say it too where it is not set.
     gain: the receiver's gain is "fixed" or "automatic".
     remove_dc: take the mean away before anything else (not available yet: always False).
     endpoint, pattern, attach, framing, topic: of the ZMQ socket; topic None: none.

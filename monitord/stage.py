@@ -56,10 +56,11 @@ class SampleSource(Protocol):
         """Make ready. Raises SourceLost or RecordingError, each with one clear line."""
         ...
 
-    def read(self, timeout_s: float) -> Block | None:
+    def read(self, timeout_s: float, wanted: int = 1) -> Block | None:
         """Hand over the next block, or None if none came in time or the source has ended.
 
-        Raises RecordingError where a recording turns out damaged; what was read before stays good.
+        wanted: samples with which the reader can do something; fewer are handed over when the time is up, or
+        where the source has blocks of its own. Raises RecordingError where a recording turns out damaged; what was read before stays good.
         """
         ...
 

@@ -82,13 +82,14 @@ class MessageQueue:
             self._entries.clear()
             self._frames, self._failure = 0, ""
 
-    def take(self, timeout_s: float) -> list[Entry]:
-        """Wait for entries; return those that follow each other without a break, about 0.1 s at most.
+    def take(self, timeout_s: float, wanted: int = 1) -> list[Entry]:
+        """Wait for `wanted` samples; return those that follow each other without a break, about 0.1 s at most.
 
-        Returns an empty list where none came in time. Raises SourceLost after `fail`.
+        Returns what there is when the time is up,  perhaps nothing. Raises SourceLost after `fail`.
         """
+        wanted = min(wanted, int(self._most))
         with self._changed:
-            self._changed.wait_for(lambda: self._entries or self._failure, max(timeout_s, 0.0))
+            self._changed.wait_for(lambda: self._frames >= wanted or self._failure, max(timeout_s, 0.0))
             if not self._entries:
                 if self._failure:
                     raise SourceLost(self._failure)

@@ -106,7 +106,7 @@ class RecordingSource:
         if file is not None:
             file.close()
 
-    def read(self, timeout_s: float) -> Block | None:
+    def read(self, timeout_s: float, wanted: int = 1) -> Block | None:
         """Hand over the next block, about 0.1 s; None where it is not due in time or nothing is left.
 
         Raises RecordingError where the recording is damaged, after all good samples before that place.

@@ -66,7 +66,7 @@ class SimulatedSource:
         self._openings += 1
         self._began_s, self._began_utc = time.monotonic(), time.time()
 
-    def read(self, timeout_s: float) -> Block | None:
+    def read(self, timeout_s: float, wanted: int = 1) -> Block | None:
         """Hand over the next 50 ms once they are over, or None if they are not within `timeout_s` seconds.
 
         A late reader gets all that is due, without loss. Raises SourceLost if the source is not open.

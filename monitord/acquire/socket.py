@@ -231,13 +231,14 @@ class SocketSource:
             thread.join()
         self._queue.clear()
 
-    def read(self, timeout_s: float) -> Block | None:
+    def read(self, timeout_s: float, wanted: int = 1) -> Block | None:
         """Hand over what follows without a break, about 0.1 s at most unless one message is longer, or None.
 
+        Waits for `wanted` samples: waking up costs more than a message does.
         Raises SourceLost where receiving has stopped.
         """
         deadline = time.monotonic() + timeout_s
-        while entries := self._queue.take(deadline - time.monotonic()):
+        while entries := self._queue.take(deadline - time.monotonic(), wanted):
             block = self._decode(entries)
             if block is not None:
                 return block

@@ -103,6 +103,11 @@ class Tuner:
         """Rates and sizes of the banks, in their order."""
         return tuple(bank.branch for bank in self._banks)
 
+    @property
+    def wanted(self) -> int:
+        """Samples that complete the next hop."""
+        return self.grid.frame - self._filled
+
     def reset(self) -> None:
         """Forget all samples: as new."""
         self._index = 0
