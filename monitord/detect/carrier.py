@@ -24,6 +24,7 @@ _BREAK_STEPS = 5  # 20 ms at less than a tenth: longer than any trough of progra
 _BREAK_BELOW = 0.1
 _NOISE_SMOOTHING = 0.2
 _MOST_ANGLE = 1.0
+_COHERENT = 0.08  # bass of 120 % leaves 0.58, noise alone 1/24
 _SETTLED_HOPS = 5  # the carrier's mean is exact from half a second on
 _LEAST_AMPLITUDE = 1e-12  # -240 dBFS: keeps the divisions by an amplitude defined where there is none
 
@@ -100,7 +101,7 @@ class CarrierRecovery:
         noise, disturbance = self._noise.density(samples.imag)
         noise = with_floor(noise, np.abs(line))
         broken = self._breaks(steps.real)
-        self._judge(line, noise)
+        self._judge(line, np.square(np.abs(steps)).mean(axis=1), noise)
         self._average(samples, broken)
         self._advance(path[:, -1], speed_change, line)
         locked = self._tracking & (self._good >= _CONFIRMED_AFTER)
@@ -166,10 +167,14 @@ class CarrierRecovery:
         self._low_run = run[:, -1]
         return np.asarray(run.max(axis=1) >= _BREAK_STEPS)
 
-    def _judge(self, line: Steps, noise: Precise) -> None:
-        """Count the hops that showed the line, and those that did not; give up after two of these."""
+    def _judge(self, line: Steps, near: Precise, noise: Precise) -> None:
+        """Count the hops that showed the line, and those that did not; give up after two of these.
+
+        near: power of all within the steps' bandwidth; a line that has moved off leaves it incoherent.
+        """
         power = np.square(np.abs(line))
         shown = (power - noise / self._hop_s > self._enough * noise) & (line.real > 0.5 * np.abs(line))
+        shown &= power > _COHERENT * near
         self._good = np.where(self._tracking & shown, self._good + 1, 0)
         self._bad = np.where(self._tracking & ~shown, self._bad + 1, 0)
         away = np.abs(self._speed) / (2 * np.pi) > 1.05 * self._acquire_hz + 2

@@ -96,7 +96,7 @@ class LineSearch:
 def _steady_hops(in_phase: Precise) -> NDArray[np.int64]:
     """Hops from the last back that have its mean within a tenth, less the one in which the line may have begun."""
     level = in_phase.reshape(len(in_phase), HOPS, -1).mean(axis=2)
-    same = np.abs(level / level[:, -1:] - 1) < _SAME_LEVEL
+    same = np.abs(level - level[:, -1:]) < _SAME_LEVEL * np.abs(level[:, -1:])
     run = np.where(same.all(axis=1), HOPS, np.argmin(same[:, ::-1], axis=1) - 1)
     return np.asarray(np.maximum(run, 0))
 
