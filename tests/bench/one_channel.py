@@ -3,7 +3,7 @@
 python -m tests.bench.one_channel
 """
 
-import resource
+import re
 import tempfile
 import threading
 import time
@@ -72,8 +72,9 @@ def live() -> None:
             load = (after["process_cpu_seconds_total",] - before["process_cpu_seconds_total",]) / lasted
             print(f"CPU of the daemon, live, two scrapes        {100 * load:8.2f} % of a core")
             print(f"chain_busy_ratio                            {100 * after['chain_busy_ratio',]:8.2f} %")
+            status = Path(f"/proc/{station.process.pid}/status").read_text()
             station.stop()
-    peak = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss / 1024
+    peak = int(re.search(r"VmHWM:\s+(\d+) kB", status).group(1)) / 1024
     print(f"peak resident memory                        {peak:8.0f} MB")
 
 
