@@ -46,7 +46,7 @@ def test_reversal_of_105_per_cent_is_one_negative_event(tone_hz: float) -> None:
 @pytest.mark.parametrize("tone_hz", [50.0, 200.0, 1000.0])
 def test_cut_off_of_110_per_cent_is_one_negative_event(tone_hz: float) -> None:
     """Made at 16 times the rate, then band-limited. In 5 kHz the short cut-offs of 1 kHz look like a reversal."""
-    modulation = signals.cut_off(RATE_HZ, 6.0, lambda t: signals.tone(1.1, tone_hz, t), band_hz=11_000.0)
+    modulation = signals.cut_off(lambda t: signals.tone(1.1, tone_hz, t), RATE_HZ, 6.0, band_hz=11_000.0)
     kept = run(transmitted(modulation, 6.0), RATE_HZ)
     assert over(kept) == [("overmodulation-negative", "reversal" if tone_hz == 1000.0 else "cut-off")]
 
