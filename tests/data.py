@@ -1,21 +1,19 @@
-"""Recordings from outside the project, where they are: a folder `shared/data` beside the repository, or the one
-that MONITORD_TEST_DATA names. Tests that need them are skipped, saying so, elsewhere."""
+"""Recordings from outside the project, where they are (`signals.data_directory`); tests are skipped elsewhere."""
 
-import os
 from pathlib import Path
 
 import numpy as np
 import pytest
 import soundfile
 
-FOLDER = Path(os.environ.get("MONITORD_TEST_DATA", Path(__file__).parents[2] / "shared" / "data"))
+from tests import signals
 
 
 def path(name: str) -> Path:
     """A file of the folder; skips the test where it is not there."""
-    found = FOLDER / name
+    found = signals.data_directory() / name
     if not found.exists():
-        pytest.skip(f"{name} is not in {FOLDER} (MONITORD_TEST_DATA names the folder of recordings)")
+        pytest.skip(f"{name} is not in {found.parent} (MONITORD_TEST_DATA names the folder of recordings)")
     return found
 
 

@@ -51,7 +51,9 @@ def main(hours: float) -> None:
     for index in range(blocks):
         samples = 0.1 * rng.standard_normal(2 * BLOCK, dtype=np.float32).view(np.complex64)
         chain.process(Block(samples, RATE_HZ, 0.0, index * BLOCK, None))
-    print(f"channel-hours of noise                      {blocks * BLOCK / RATE_HZ * len(CHANNELS) / 3600:8.1f}")
+    print(
+        f"channel-hours of noise                      {blocks * BLOCK / RATE_HZ * len(CHANNELS) / 3600:8.1f}"
+    )
     print(f"longest stretch of claimed lock             {watch.longest / 10:8.1f} s")
     print(f"hops with a carrier called present          {watch.present:8d}")
     print(f"carrier returns told                        {watch.returns:8d}")

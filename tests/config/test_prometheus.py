@@ -13,7 +13,9 @@ from monitord.publish.tally import Tally
 
 FOLDER = Path(__file__).parents[2] / "config" / "prometheus"
 PROMTOOL = shutil.which("promtool")
-needs_promtool = pytest.mark.skipif(PROMTOOL is None, reason="promtool (Debian package prometheus) is not installed")
+needs_promtool = pytest.mark.skipif(
+    PROMTOOL is None, reason="promtool (Debian package prometheus) is not installed"
+)
 
 
 def promtool(*words: str) -> subprocess.CompletedProcess[str]:

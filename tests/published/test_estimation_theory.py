@@ -1,0 +1,113 @@
+"""Noise, loop and windows against the literature (numbers as in CHECKS section E).
+
+E6 Rice 1944; E15 Rife and Boorstyn 1974; E16 Gardner, Phaselock Techniques; E17 Harris 1978.
+"""
+
+import numpy as np
+import pytest
+from scipy import special
+
+from monitord.blocks import Block
+from monitord.condition.grid import STEPS
+from monitord.condition.tuner import Tuner
+from monitord.detect.averaging import TaperedMean
+from monitord.detect.envelope import EnvelopeDetector
+from monitord.detect.loop import CarrierLoop, natural_frequency
+from monitord.stage import Bank
+from tests import signals
+from tests.runs import channel, run
+
+RATE_HZ = 48_000.0
+CARRIER_HZ = 12_000.0
+
+
+@pytest.mark.parametrize(("cnr_db", "mean", "spread"), [(10, 1.025341, 0.220625), (20, 1.002503, 0.070622)])
+def test_e6_the_mean_and_spread_of_an_envelope_in_noise(cnr_db: float, mean: float, spread: float) -> None:
+    """Rice: E[r]/A and std/A at CNR = A^2 / 2 sigma^2, the CNR that of the channel's own noise bandwidth (E6)."""
+    channels = (channel(bandwidth_hz=4500.0),)
+    tuner = Tuner(RATE_HZ, 0.0, False, [list(channels)])
+    branch = tuner.branches[0]
+    detector = EnvelopeDetector()
+    detector.prepare(Bank(channels, branch.rate_hz, branch.frames, branch.noise_hz, True, {}))
+    c_n0_dbhz = cnr_db + 10 * np.log10(2 * branch.noise_hz)
+    wave = signals.am(RATE_HZ, 30.0, carrier_hz=CARRIER_HZ, c_n0_dbhz=c_n0_dbhz, seed=8)
+    block = Block(wave.astype(np.complex64), RATE_HZ, 0.0, 0, None)
+    hops = [detector.process(hop[0]) for hop in tuner.process(block)][12:]
+    envelope = np.concatenate([hop.in_phase[0] for hop in hops])
+    x = 10 ** (cnr_db / 10)
+    laguerre = np.exp(-x / 2) * ((1 + x) * special.iv(0, x / 2) + x * special.iv(1, x / 2))
+    assert np.sqrt(np.pi / x) / 2 * laguerre == pytest.approx(mean, abs=1e-6)
+    assert envelope.mean() == pytest.approx(mean, abs=0.003)
+    assert envelope.std() == pytest.approx(spread, rel=0.02)
+
+
+@pytest.mark.parametrize("depth", [0.0, 0.8])
+@pytest.mark.parametrize("c_n0_dbhz", [50.0, 60.0, 80.0])
+def test_e15_frequency_reaches_the_cramer_rao_bound(c_n0_dbhz: float, depth: float) -> None:
+    """sd f = sqrt(6 / ((2 pi)^2 (C/N0) T^3)), 0.00123 Hz at 50 dB-Hz in 1 s (CHECKS E15): within 1.25 times."""
+    wave = signals.am(
+        16_000.0,
+        152.0,
+        carrier_hz=2_003.0,
+        modulation=lambda t: signals.tone(depth, 300.0, t),
+        c_n0_dbhz=c_n0_dbhz,
+        seed=3,
+    )
+    kept = run(wave, 16_000.0, [channel(carrier_hz=2_000.0, bandwidth_hz=1_000)], block=16_000)
+    error = kept.of("carrier_frequency_offset_hertz")[1:-1] - 3.0
+    bound = np.sqrt(6 / ((2 * np.pi) ** 2 * 10 ** (c_n0_dbhz / 10)))
+    # 150 readings: the rms itself scatters by 1/sqrt(300) = 6 %.
+    assert 0.82 < np.sqrt(np.mean(error**2)) / bound < 1.25
+
+
+@pytest.mark.parametrize("c_n0_dbhz", [50.0, 60.0])
+def test_e15_level_scatters_as_a_hann_mean_must(c_n0_dbhz: float) -> None:
+    """The bound is sd A/A = 1/sqrt(2 C/N0 T); a Hann taper has sqrt(1.5) of it (its noise bandwidth, CHECKS E17)."""
+    wave = signals.am(16_000.0, 152.0, carrier_hz=2_003.0, c_n0_dbhz=c_n0_dbhz, seed=4)
+    kept = run(wave, 16_000.0, [channel(carrier_hz=2_000.0, bandwidth_hz=1_000)], block=16_000)
+    amplitude = 10 ** ((kept.of("carrier_level_dbfs")[1:-1] + 20) / 20)
+    expected = np.sqrt(1.5 / (2 * 10 ** (c_n0_dbhz / 10)))
+    assert np.std(amplitude) / expected == pytest.approx(1, abs=0.18)  # three sigma of a spread from 150
+    assert np.mean(amplitude) == pytest.approx(1, abs=3 * expected / np.sqrt(150))
+
+
+@pytest.mark.parametrize("loop_bandwidth_hz", [2.0, 5.0, 10.0])
+def test_e16_the_loop_has_the_noise_bandwidth_that_is_set(loop_bandwidth_hz: float) -> None:
+    """B_L = (wn/2)(zeta + 1/(4 zeta)): 0.530330 wn at zeta = 0.7071 (CHECKS E16).
+
+    Measured as the noise power gain of the discrete loop: the sum of its squared impulse response, over 2 T.
+    """
+    assert natural_frequency(loop_bandwidth_hz) * 0.530330 == pytest.approx(loop_bandwidth_hz, rel=1e-5)
+    step_s = 1 / 240
+    steps = 2400
+    loop = CarrierLoop(loop_bandwidth_hz, steps, step_s)
+    impulse = np.zeros((1, steps))
+    impulse[0, 0] = 1
+    response = loop.follow(impulse)[0][0]
+    measured_hz = np.sum(response**2) / (2 * step_s)
+    assert measured_hz == pytest.approx(loop_bandwidth_hz, rel=0.15)  # the discrete loop is a little wider
+
+
+def test_e17_the_taper_of_the_carriers_mean_is_a_hann_window() -> None:
+    """Hann: noise bandwidth 1.5 bins (CHECKS E17): the variance of the mean of white noise is 1.5 of a plain mean's."""
+    rng = np.random.default_rng(6)
+    mean = TaperedMean(4000, STEPS * 4, 10, STEPS)
+    everywhere = np.ones(4000, bool)
+    for _ in range(10):
+        mean.take(rng.standard_normal((4000, STEPS * 4), dtype=np.float32), everywhere)
+    assert np.var(mean.mean) * STEPS * 40 == pytest.approx(1.5, rel=0.08)
+    for _ in range(11):
+        mean.take(np.ones((4000, STEPS * 4), np.float32), everywhere)
+    np.testing.assert_allclose(mean.mean, 1.0, atol=1e-6)
+
+
+def test_a_50_hz_tone_does_not_move_the_carriers_mean() -> None:
+    """A plain mean of 1 s errs by 0.04 dB under a 50 Hz tone of 90 % (computed); the taper must not by 0.0001."""
+    rate_hz, frames = 24_000.0, 2400
+    mean = TaperedMean(1, frames, 10, STEPS)
+    for tone_hz in (20.3, 50.0, 49.7, 240.9, 481.3):
+        t = np.arange(25 * frames) / rate_hz
+        wave = (1 + 0.9 * np.cos(2 * np.pi * tone_hz * t + 0.4)).astype(np.float32)
+        for part in wave.reshape(25, 1, frames):
+            mean.take(part, np.ones(1, bool))
+        assert 20 * np.log10(mean.mean[0]) == pytest.approx(0, abs=0.002)
