@@ -60,7 +60,8 @@ class SampleSource(Protocol):
         """Hand over the next block, or None if none came in time or the source has ended.
 
         wanted: samples with which the reader can do something; fewer are handed over when the time is up, or
-        where the source has blocks of its own. Raises RecordingError where a recording turns out damaged; what was read before stays good.
+        where the source has blocks of its own size.
+        Raises RecordingError where a recording turns out damaged; what was read before stays good.
         """
         ...
 
