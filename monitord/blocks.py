@@ -39,6 +39,10 @@ def fault_names(bits: int) -> tuple[str, ...]:
     return tuple(name for fault, name in FAULT_NAMES.items() if bits & fault)
 
 
+LOSS_REASONS = ("overrun", "sequence", "rejected")
+"""Why samples are missing: a full queue, a jump in the sender's count, a message that was rejected."""
+
+
 @dataclass(frozen=True, slots=True)
 class Block:
     """Samples as they came.
@@ -48,7 +52,7 @@ class Block:
     center_hz: the frequency that 0 Hz of the samples stands for.
     start: index of the first sample since the stream began; lost samples are counted in it.
     utc: UTC of the first sample, seconds since 1970, or None where the recording does not say.
-    lost, lost_reason: frames lost just before the block, and why ("" when none).
+    lost, lost_reason: frames lost just before the block, and which of LOSS_REASONS ("" when none).
     clipped: how many samples stood at full scale.
     stream: number of the stream; another number means that counting began anew (a reconnect).
     """

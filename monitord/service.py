@@ -11,7 +11,7 @@ import numpy as np
 
 from monitord import __version__
 from monitord.acquire import make_source
-from monitord.blocks import Block, Event
+from monitord.blocks import LOSS_REASONS, Block, Event
 from monitord.chain import Chain, Stream
 from monitord.errors import ConfigError, SourceLost
 from monitord.measure import QUANTITIES
@@ -64,7 +64,7 @@ class Service:
 
     def __init__(self, settings: Settings) -> None:
         self._settings = settings
-        self._tally = Tally()
+        self._tally = Tally(lost=dict.fromkeys(LOSS_REASONS, 0))
         names = [channel.name for channel in settings.channels]
         self._page = MetricsPage(names, QUANTITIES, self._tally, __version__)
         self._web = WebServer(settings.http.listen, self._page, self.health)

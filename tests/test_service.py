@@ -74,6 +74,7 @@ def test_a_stream_is_measured_a_burst_told_within_300_ms_and_a_cut_carrier_withi
         before = station.metrics()
         assert before["overmodulation_events_total", "air", "negative"] == 0
         assert before["carrier_present", "air"] == 0
+        assert before["source_lost_samples_total", "sequence"] == 0
         assert ("carrier_level_dbfs", "air") not in before
         subscribed(sender)
         with Sending(sender, transmission(envelope)) as sending:
