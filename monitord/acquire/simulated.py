@@ -20,15 +20,6 @@ BLOCK_S = 0.05
 _AHEAD_FRAMES = 9_600  # made at one go where blocks are short: many small steps cost more than one large one
 
 
-def builtin_channels() -> tuple[Channel, ...]:
-    """The channels of the station when the settings name none: three, with nominal carriers round 0 Hz."""
-    return (
-        Channel(name="alder", carrier_hz=-14_000.0),
-        Channel(name="birch", carrier_hz=-1_000.0),
-        Channel(name="cedar", carrier_hz=13_000.0),
-    )
-
-
 class SimulatedSource:
     """A SampleSource with one transmitter on each carrier of `channels`.
 

@@ -5,12 +5,12 @@ the loop over the steps, and rotate the samples by the phase that the loop found
 from quadrature over the *mean* carrier, so that bass and over-modulation do not upset it.
 """
 
-from dataclasses import dataclass
+from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
 
-from monitord.blocks import Baseband, Complex, Flags, Precise, Span
+from monitord.blocks import Baseband, Complex, Detected, Flags, Precise, Real
 from monitord.condition.grid import STEPS
 from monitord.detect.averaging import TaperedMean
 from monitord.detect.loop import CarrierLoop
@@ -29,29 +29,7 @@ _SETTLED_HOPS = 5  # the carrier's mean is exact from half a second on
 _LEAST_AMPLITUDE = 1e-12  # -240 dBFS: keeps the divisions by an amplitude defined where there is none
 
 Steps = NDArray[np.complex128]
-
-
-@dataclass(frozen=True, slots=True)
-class Carrier:
-    """One hop with its carriers recovered.
-
-    samples: baseband with each carrier turned to phase 0, complex64 (channels, frames), full scale = 1.
-    The other fields are those of Detected.
-    """
-
-    samples: Complex
-    rate_hz: float
-    span: Span
-    amplitude: Precise
-    hop_amplitude: Precise
-    noise_density: Precise
-    sigma: Precise
-    phase: Precise
-    offset_hz: Precise
-    searched: Flags
-    locked: Flags
-    settled: Flags
-    broken: Flags
+InPhase = Callable[[Complex, Complex], Real]
 
 
 class CarrierRecovery:
@@ -91,8 +69,12 @@ class CarrierRecovery:
         self._low_run = np.zeros(count, np.int64)
         self._smooth_noise = np.full(count, np.nan)
 
-    def process(self, baseband: Baseband) -> Carrier:
-        """Recover the carriers of one hop."""
+    def process(self, baseband: Baseband, in_phase: InPhase) -> Detected:
+        """Recover the carriers of one hop and detect it.
+
+        in_phase: what the detector makes of the baseband with each carrier turned to phase 0, and of the baseband
+        as it came; both complex64 (channels, frames), full scale = 1, as its result.
+        """
         steps = self._averaged_steps(baseband.samples)
         path, speed_change = self._loop.follow(self._angles(steps))
         samples, phase = self._rotate(baseband.samples, path)
@@ -109,8 +91,10 @@ class CarrierRecovery:
         amplitude = np.where(locked, self._mean.mean, np.nan)
         spread = np.maximum(np.maximum(noise, disturbance), self._smooth_noise)
         sigma = np.sqrt(spread * self._noise_hz) / amplitude
-        carrier = Carrier(
-            samples=samples,
+        scale = (1 / amplitude).astype(np.float32)[:, None]
+        detected = Detected(
+            in_phase=in_phase(samples, baseband.samples) * scale,
+            quadrature=samples.imag * scale,
             rate_hz=self._rate_hz,
             span=baseband.span,
             amplitude=amplitude,
@@ -125,7 +109,7 @@ class CarrierRecovery:
             broken=broken,
         )
         self._seek(baseband.samples)
-        return carrier
+        return detected
 
     def _averaged_steps(self, samples: Complex) -> Steps:
         """The hop turned by the predicted phase and averaged over each step, complex128 (channels, STEPS)."""

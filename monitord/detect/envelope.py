@@ -5,10 +5,14 @@ The carrier is recovered all the same: level, frequency and noise come from it, 
 
 import numpy as np
 
-from monitord.blocks import Baseband, Detected
+from monitord.blocks import Baseband, Complex, Detected, Real
 from monitord.detect.carrier import CarrierRecovery
-from monitord.detect.synchronous import scaled
 from monitord.stage import Bank
+
+
+def magnitude(_: Complex, raw: Complex) -> Real:
+    """The magnitude of the baseband."""
+    return np.abs(raw)
 
 
 class EnvelopeDetector:
@@ -22,8 +26,7 @@ class EnvelopeDetector:
 
     def process(self, baseband: Baseband) -> Detected:
         """See stage.Detector."""
-        carrier = self._recovery.process(baseband)
-        return scaled(carrier, np.abs(baseband.samples))
+        return self._recovery.process(baseband, magnitude)
 
     def reset(self) -> None:
         """See stage.Detector."""

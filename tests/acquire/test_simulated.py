@@ -13,17 +13,17 @@ from numpy.typing import NDArray
 
 from monitord.acquire import scenario
 from monitord.acquire.programme import LOOP_FRAMES, PASSAGE_FRAMES, make_loop
-from monitord.acquire.simulated import SimulatedSource, builtin_channels
+from monitord.acquire.simulated import SimulatedSource
 from monitord.blocks import Block, Complex
 from monitord.errors import SourceLost
-from monitord.settings import Channel, Source
+from monitord.settings import Channel, Source, built_in_channels
 
 RATE_HZ = 48_000
-ALDER, BIRCH, CEDAR = (channel.carrier_hz for channel in builtin_channels())
+ALDER, BIRCH, CEDAR = (channel.carrier_hz for channel in built_in_channels())
 
 
 def station(pace: Literal["flat-out", "real-time"] = "flat-out") -> SimulatedSource:
-    source = SimulatedSource(Source(kind="simulated", pace=pace), builtin_channels())
+    source = SimulatedSource(Source(kind="simulated", pace=pace), built_in_channels())
     source.open()
     return source
 
@@ -85,8 +85,8 @@ def density_db(samples: Complex, low_hz: float, high_hz: float) -> float:
 
 
 def test_its_three_channels_lie_apart_and_inside_the_span() -> None:
-    carriers = sorted(channel.carrier_hz for channel in builtin_channels())
-    assert len({channel.name for channel in builtin_channels()}) == 3
+    carriers = sorted(channel.carrier_hz for channel in built_in_channels())
+    assert len({channel.name for channel in built_in_channels()}) == 3
     assert np.diff(carriers).min() >= 12_000
     assert max(map(abs, carriers)) + 5_000 + 100 < 24_000
 
@@ -230,7 +230,7 @@ def test_a_late_reader_gets_all_that_is_due_without_loss_and_no_more() -> None:
 
 
 def test_reading_before_open_or_after_close_says_so_in_one_line() -> None:
-    source = SimulatedSource(Source(kind="simulated"), builtin_channels())
+    source = SimulatedSource(Source(kind="simulated"), built_in_channels())
     with pytest.raises(SourceLost, match="not open") as caught:
         source.read(0)
     assert "\n" not in str(caught.value)

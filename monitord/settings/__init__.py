@@ -1,7 +1,7 @@
 """Settings files (TOML) into validated, immutable settings, and every mistake at once into words.
 
-The models are in settings_models.py. A file is read in two passes: each table by itself
-(settings_problems.py), then what depends on more than one value (settings_checks.py), over all that
+The models are in models.py. A file is read in two passes: each table by itself
+(problems.py), then what depends on more than one value (checks.py), over all that
 did parse. Whatever is wrong is told in one line each: key, value, what would be right.
 """
 
@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from monitord.errors import ConfigError
-from monitord.settings_checks import (
+from monitord.settings.checks import (
     MOST_CHANNELS,
     OF_EVERY_KIND,
     Range,
@@ -22,7 +22,7 @@ from monitord.settings_checks import (
     raster_span_problems,
     source_problems,
 )
-from monitord.settings_models import (
+from monitord.settings.models import (
     DETECTORS,
     MIN_RATE_HZ,
     Channel,
@@ -34,7 +34,7 @@ from monitord.settings_models import (
     Source,
     Station,
 )
-from monitord.settings_problems import Model, Part, one_line, shown, take, unknown_key
+from monitord.settings.problems import Model, Part, one_line, shown, take, unknown_key
 
 __all__ = [
     "DETECTORS",
@@ -46,6 +46,7 @@ __all__ = [
     "Source",
     "Station",
     "built_in",
+    "built_in_channels",
     "check_span",
     "load",
     "parse",
@@ -91,7 +92,7 @@ def parse(text: str, where: str, *, recording: str | None = None) -> Settings:
 
 def built_in() -> Settings:
     """Settings of the built-in simulated station, for running without a settings file."""
-    return Settings(source=Source(kind="simulated"), channels=_built_in_channels())
+    return Settings(source=Source(kind="simulated"), channels=built_in_channels())
 
 
 def check_span(settings: Settings, rate_hz: float, center_hz: float, real: bool) -> tuple[str, ...]:
@@ -219,7 +220,7 @@ def _channels_unasked(
     if source.model.kind != "simulated":
         problems.append("channel: missing; must be at least one [[channel]] or [[raster]]")
         return ()
-    channels = _built_in_channels()
+    channels = built_in_channels()
     if span is not None and any(_outside(channels, span)):
         problems.append(
             f"channel: missing; the built-in channels do not lie inside the source's span ({span}):"
@@ -236,8 +237,10 @@ def _outside(channels: Iterable[Channel], span: Range) -> Iterable[str]:
             yield f'channel "{channel.name}".{key} = {shown(getattr(channel, key))}: {text}'
 
 
-def _built_in_channels() -> tuple[Channel, ...]:
-    # Here and not above: the simulated station is described by settings itself.
-    from monitord.acquire.simulated import builtin_channels
-
-    return builtin_channels()
+def built_in_channels() -> tuple[Channel, ...]:
+    """The channels of the simulated station when none are named: three, with nominal carriers round 0 Hz."""
+    return (
+        Channel(name="alder", carrier_hz=-14_000.0),
+        Channel(name="birch", carrier_hz=-1_000.0),
+        Channel(name="cedar", carrier_hz=13_000.0),
+    )

@@ -1,6 +1,6 @@
 """The settings as immutable types. Every attribute bears the name of its key in the settings file.
 
-Each value is checked by itself here; what depends on two values is checked in settings_checks.py.
+Each value is checked by itself here; what depends on two values is checked in checks.py.
 """
 
 import os

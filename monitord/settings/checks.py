@@ -5,8 +5,8 @@ from collections import Counter
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
-from monitord.settings_models import MIN_BANDWIDTH_HZ, NAME, NAME_RULE, Channel, Raster, Source, host_port
-from monitord.settings_problems import Part, shown
+from monitord.settings.models import MIN_BANDWIDTH_HZ, NAME, NAME_RULE, Channel, Raster, Source, host_port
+from monitord.settings.problems import Part, shown
 
 MOST_CHANNELS = 2000
 
