@@ -4,7 +4,8 @@ from collections.abc import Mapping
 
 import numpy as np
 
-from monitord.blocks import Detected, Flags, Precise
+from monitord.blocks import Detected, Flags, Precise, Real
+from monitord.measure.noiselift import NEAR_TOP_SIGMA, corrected_largest, lift
 from monitord.measure.truepeak import TruePeaks
 from monitord.measure.validity import peaks_mean_something
 from monitord.quantities import Quantity
@@ -23,14 +24,14 @@ class ModulationMeter:
         Quantity(
             "modulation_positive_peak_ratio",
             "",
-            "Largest positive true peak of the modulation in the last 10 s.",
+            "Largest positive true peak of the modulation in the last 10 s, less what noise lifts it.",
             "47 CFR 73.14",
             trusted_only=True,
         ),
         Quantity(
             "modulation_negative_peak_ratio",
             "",
-            "Largest negative true peak of the modulation in the last 10 s.",
+            "Largest negative true peak of the modulation in the last 10 s, less what noise lifts it.",
             "47 CFR 73.14",
             trusted_only=True,
         ),
@@ -62,6 +63,7 @@ class ModulationMeter:
         self._bank = bank
         self._window = round(WINDOW_S / bank.hop_s)
         self._slots = round(RECURRING_WINDOW_S / bank.hop_s)
+        self._independent = 2 * bank.noise_hz / bank.rate_hz  # of the samples of a hop
         self._average_hops = max(1, round(bank.channels[0].carrier_average_s / bank.hop_s))
         self.reset()
 
@@ -71,6 +73,8 @@ class ModulationMeter:
         self._true = TruePeaks(count, self._bank.frames)
         self._peaks = np.full((self._slots, 2, count), np.nan)  # a ring: `_place` holds the newest
         self._raw = np.full((self._slots, 2, count), np.nan)  # the same peaks, in-phase, full scale = 1
+        self._count = np.ones((self._slots, 2, count))  # independent samples near each peak
+        self._sigma = np.full((self._slots, count), np.nan)  # of the reception noise
         self._place = 0
         self._amplitude = np.full(count, np.nan)  # of the hop before
         self._valid_hops = np.zeros(count, np.int64)
@@ -88,23 +92,32 @@ class ModulationMeter:
         highest, lowest = self._true.find()
         usable = detected.settled & ~detected.broken
         peaks = np.where(usable & peaks_mean_something(detected, self._bank), [highest, -lowest], np.nan)
-        self._remember(peaks, detected)
-        square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - self._noise_power(detected)
+        noise_power = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
+        sigma = np.sqrt(noise_power)
+        count = self._near_top(wave, highest, lowest, sigma)
+        self._remember(peaks, count, sigma, detected)
+        square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - noise_power
         self._square += np.where(usable, square, 0)
         self._square_hops += usable
         self._true.advance()
+        peaks = peaks - lift(count) * sigma
         return {"positive_peak": peaks[0], "negative_peak": peaks[1]}
 
-    def _noise_power(self, detected: Detected) -> Precise:
-        """Variance of the reception noise in the in-phase part, carrier = 1 (channels,)."""
-        return detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
+    def _near_top(self, wave: Real, highest: Precise, lowest: Precise, sigma: Precise) -> Precise:
+        """How many independent samples stand within 3 sigma of the highest and of the lowest, (2, channels)."""
+        reach = NEAR_TOP_SIGMA * sigma
+        above = (wave > (highest - reach).astype(np.float32)[:, None]).sum(axis=1)
+        below = (wave < (lowest + reach).astype(np.float32)[:, None]).sum(axis=1)
+        return np.maximum(np.array([above, below]) * self._independent, 1.0)
 
-    def _remember(self, peaks: Precise, detected: Detected) -> None:
+    def _remember(self, peaks: Precise, count: Precise, sigma: Precise, detected: Detected) -> None:
         # A cut is known for sure only in the hop after the one in which it began.
         self._peaks[self._place, :, detected.broken] = np.nan
         self._raw[self._place, :, detected.broken] = np.nan
         self._place = (self._place + 1) % self._slots
         self._peaks[self._place] = peaks
+        self._count[self._place] = count
+        self._sigma[self._place] = sigma
         self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
         self._valid_hops += np.isfinite(peaks[0])
         self._center(detected.amplitude)
@@ -127,7 +140,8 @@ class ModulationMeter:
         """See stage.Meter."""
         heard = self._square_hops > 0  # nothing of the past stands for an interval without a valid hop
         window = (self._place - np.arange(self._window)) % self._slots
-        positive, negative = np.where(heard, np.fmax.reduce(self._peaks[window], axis=0), np.nan)
+        largest = corrected_largest(self._peaks[window], self._count[window], self._sigma[self._place])
+        positive, negative = np.where(heard, largest, np.nan)
         recurring = self._recurring(heard)
         mean = np.divide(self._square, self._square_hops, out=np.full(heard.shape, np.nan), where=heard)
         self._begin()
@@ -145,6 +159,7 @@ class ModulationMeter:
         ready = heard & enough & (self._valid_hops >= self._slots)
         if not ready.any():
             return np.full(self._peaks.shape[1:], np.nan)
-        slots = np.where(np.isfinite(self._peaks), self._peaks, -np.inf)
+        peaks = self._peaks - lift(self._count) * self._sigma[:, None]
+        slots = np.where(np.isfinite(peaks), peaks, -np.inf)
         ranked = np.partition(slots, -RECURRING_RANK, axis=0)[-RECURRING_RANK]
         return np.where(ready, ranked, np.nan)
