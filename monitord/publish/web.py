@@ -180,7 +180,8 @@ class WebServer:
         """End within a second, whatever connections are still open. May be called twice."""
         if self._thread is None or self._socket is None:
             return
-        self._server.end()
+        if self._thread.is_alive():
+            self._server.end()
         self._thread.join(1.0)
         self._socket.close()
         self._thread = None
