@@ -117,6 +117,7 @@ class Detected:
     in_phase, quadrature: float32 (channels, frames), the carrier scaled to 1; NaN rows where there is no carrier.
     amplitude: carrier amplitude (channels,), full scale = 1; NaN where there is no carrier.
     hop_amplitude: amplitude of the carrier in this hop alone (channels,), never NaN.
+    recent_amplitude: mean of this and the last hop's: lags less than `amplitude`, but moves with deep bass.
     noise_density: reception noise of this hop, power per Hz re full scale (channels,).
     sigma: standard deviation of what disturbs `in_phase` (reception noise, impulses, other carriers), as the
         quadrature shows it, carrier = 1 (channels,).
@@ -135,6 +136,7 @@ class Detected:
     span: Span
     amplitude: Precise
     hop_amplitude: Precise
+    recent_amplitude: Precise
     noise_density: Precise
     sigma: Precise
     phase: Precise

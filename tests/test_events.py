@@ -1,5 +1,7 @@
 """What raises an event and what must not, end to end through the chain, in sentences."""
 
+from collections.abc import Callable
+
 import numpy as np
 import pytest
 
@@ -137,3 +139,25 @@ def test_digital_silence_is_a_loss_and_no_trouble() -> None:
     kept = run(np.zeros(150_000, complex), RATE_HZ)
     assert kept.kinds() == ["carrier-loss"]
     assert set(kept.tally.stage_failures.values()) == {0}
+
+
+@pytest.mark.parametrize(
+    "level_db",
+    [
+        lambda t: np.where(t > 4.03, 6.0, 0.0),
+        lambda t: np.where(t > 4.03, -6.0, 0.0),
+        lambda t: 3 * np.sin(2 * np.pi * 0.2 * t),
+        lambda t: -8 * np.clip(np.minimum(t - 4, 7 - t), 0, 1),
+    ],
+    ids=["up 6 dB", "down 6 dB", "6 dB in 5 s", "8 dB in 1 s"],
+)
+def test_a_carrier_that_changes_level_is_not_over_modulated(
+    level_db: Callable[[np.ndarray], np.ndarray],
+) -> None:
+    """The carrier's mean lags by half a second; 97 % must not be told as more meanwhile."""
+    t = signals.times(RATE_HZ, signals.frames_of(RATE_HZ, 10.0))
+    envelope = 10 ** (level_db(t) / 20) * (1 + signals.tone(0.97, 700.0, t))
+    kept = run(transmitted(envelope - 1, 10.0), RATE_HZ)
+    assert kept.events == []
+    assert np.nanmax(kept.of("modulation_positive_peak_ratio")) < 1.3
+    assert np.nanmax(kept.of("modulation_negative_peak_ratio")) < 1.0

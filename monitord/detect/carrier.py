@@ -66,6 +66,7 @@ class CarrierRecovery:
         self._tracking = np.zeros(count, bool)
         self._good = np.zeros(count, np.int64)
         self._bad = np.zeros(count, np.int64)
+        self._last_hop = np.zeros(count)
         self._low_run = np.zeros(count, np.int64)
         self._smooth_noise = np.full(count, np.nan)
 
@@ -91,6 +92,9 @@ class CarrierRecovery:
         amplitude = np.where(locked, self._mean.mean, np.nan)
         spread = np.maximum(np.maximum(noise, disturbance), self._smooth_noise)
         sigma = np.sqrt(spread * self._noise_hz) / amplitude
+        hop_amplitude = np.where(self._tracking, np.abs(line), 0.0)
+        recent_amplitude = (hop_amplitude + np.where(self._good > 1, self._last_hop, hop_amplitude)) / 2
+        self._last_hop = hop_amplitude
         scale = (1 / amplitude).astype(np.float32)[:, None]
         detected = Detected(
             in_phase=in_phase(samples, baseband.samples) * scale,
@@ -98,7 +102,8 @@ class CarrierRecovery:
             rate_hz=self._rate_hz,
             span=baseband.span,
             amplitude=amplitude,
-            hop_amplitude=np.where(self._tracking, np.abs(line), 0.0),
+            hop_amplitude=hop_amplitude,
+            recent_amplitude=recent_amplitude,
             noise_density=noise,
             sigma=sigma,
             phase=phase + steps.imag / np.maximum(self._amplitude, _LEAST_AMPLITUDE)[:, None],

@@ -26,6 +26,7 @@ _TROUGH_BELOW = 0.1
 _LONGEST_S = 0.025
 _PARABOLA = 0.95 / 3
 _AT_ZERO = 0.006
+_RISING = 1.1
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,8 +81,12 @@ class ExcursionMeter:
         return {"over_positive_s": over_s, "over_positive_span_s": over_span_s, **under}
 
     def _above(self, detected: Detected, judged: Flags, clear: Precise) -> tuple[Precise, Precise]:
-        ceiling = (1 + self._positive + clear).astype(np.float32)
-        rows = np.flatnonzero(judged & (detected.in_phase.max(axis=1) > ceiling))
+        # The carrier's mean lags; where the carrier rises, what it is now must not be taken for modulation.
+        now = np.maximum(detected.hop_amplitude, detected.recent_amplitude) / detected.amplitude
+        ceiling = ((1 + self._positive + clear) * np.fmax(now, 1)).astype(np.float32)
+        last_hop = 2 * detected.recent_amplitude - detected.hop_amplitude
+        rising = detected.hop_amplitude > _RISING * last_hop  # somewhere in this hop, nobody knows where
+        rows = np.flatnonzero(judged & ~rising & (detected.in_phase.max(axis=1) > ceiling))
         spent, span = np.zeros(len(judged)), np.full((len(judged), 2), np.nan)
         if len(rows):
             beyond = detected.in_phase[rows] > ceiling[rows, None]

@@ -15,6 +15,8 @@ WINDOW_S = 10.0
 RECURRING_WINDOW_S = 60.0
 RECURRING_RANK = 10  # common practice: how many make "frequently recurring"
 _RECURRING_SHARE = 0.9
+_MOVING = 0.03  # of the carrier against its mean: peaks wait for the mean around them
+_LEAPT = 0.1  # and against that: no peak is told
 
 
 class ModulationMeter:
@@ -74,6 +76,7 @@ class ModulationMeter:
         self._peaks = np.full((self._slots, 2, count), np.nan)  # a ring: `_place` holds the newest
         self._raw = np.full((self._slots, 2, count), np.nan)  # the same peaks, in-phase, full scale = 1
         self._count = np.ones((self._slots, 2, count))  # independent samples near each peak
+        self._recent = np.full((self._slots, count), np.nan)  # the carrier's amplitude about then
         self._sigma = np.full((self._slots, count), np.nan)  # of the reception noise
         self._place = 0
         self._amplitude = np.full(count, np.nan)  # of the hop before
@@ -115,7 +118,9 @@ class ModulationMeter:
         self._peaks[self._place, :, detected.broken] = np.nan
         self._raw[self._place, :, detected.broken] = np.nan
         self._place = (self._place + 1) % self._slots
-        self._peaks[self._place] = peaks
+        moving = np.abs(detected.recent_amplitude / detected.amplitude - 1) > _MOVING
+        self._peaks[self._place] = np.where(moving & (self._average_hops > 1), np.nan, peaks)
+        self._recent[self._place] = detected.recent_amplitude
         self._count[self._place] = count
         self._sigma[self._place] = sigma
         self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
@@ -126,7 +131,8 @@ class ModulationMeter:
     def _center(self, amplitude: Precise) -> None:
         """Refer the peaks of half an averaging time ago to the carrier's mean around them, now that it is known.
 
-        The detector can only look back; where the carrier moves, its mean lags by half its length.
+        The detector can only look back; where the carrier moves, its mean lags by half its length, and the peaks
+        wait until they can be referred to what was there. Where it leapt, no mean is right.
         """
         half = self._average_hops // 2
         if half == 0:
@@ -134,7 +140,10 @@ class ModulationMeter:
         around = amplitude if self._average_hops % 2 else (amplitude + self._amplitude) / 2
         place = (self._place - half) % self._slots
         centered = (self._raw[place] / around - 1) * [[1], [-1]]
-        self._peaks[place] = np.where(np.isfinite(centered), centered, self._peaks[place])
+        self._peaks[place] = np.where(np.isfinite(around), centered, self._peaks[place])
+        about = (place + np.array([-1, 0, 1])) % self._slots
+        leapt = (np.abs(self._recent[about] / around - 1) > _LEAPT).any(axis=0)
+        self._peaks[place, :, leapt] = np.nan
 
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
