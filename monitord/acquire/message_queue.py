@@ -52,6 +52,7 @@ class MessageQueue:
         self._changed = threading.Condition()
         self._entries: deque[Entry] = deque()
         self._frames = 0
+        self._wanted = 1
         self._failure = ""
 
     def put(self, entries: Iterable[Entry]) -> None:
@@ -61,7 +62,8 @@ class MessageQueue:
                 full = self._entries and self._frames + entry.frames > self._capacity
                 self._entries.append(self._overrun(entry) if full else entry)
                 self._frames += entry.frames
-            self._changed.notify_all()
+            if self._frames >= self._wanted:  # waking the reader for less would cost more than the message
+                self._changed.notify_all()
 
     def _overrun(self, entry: Entry) -> Entry:
         ended = sum(old.frames for old in self._entries if old.stream != entry.stream)
@@ -87,9 +89,9 @@ class MessageQueue:
 
         Returns what there is when the time is up,  perhaps nothing. Raises SourceLost after `fail`.
         """
-        wanted = min(wanted, int(self._most))
         with self._changed:
-            self._changed.wait_for(lambda: self._frames >= wanted or self._failure, max(timeout_s, 0.0))
+            self._wanted = min(wanted, int(self._most))
+            self._changed.wait_for(lambda: self._frames >= self._wanted or self._failure, max(timeout_s, 0.0))
             if not self._entries:
                 if self._failure:
                     raise SourceLost(self._failure)
