@@ -17,7 +17,7 @@ from monitord.stage import SourceCounts
 
 BLOCK_S = 0.05
 
-_AHEAD_FRAMES = 9_600  # made at one go where blocks are short: many small steps cost more than one large one
+_AHEAD_FRAMES = 19_200  # made at one go where blocks are short: many small steps cost more than one large one
 
 
 class SimulatedSource:
