@@ -244,6 +244,8 @@ class Chain:
         fields = {name: self._merged([part[name] for part in parts]) for name in parts[0]}
         present, cut_off = fields.pop("present"), fields.pop("cut_off")
         faults = [bank.judge.faults(hop) for bank, hop in zip(self._banks, detected, strict=True)]
+        for part, bits, hop in zip(parts, faults, detected, strict=True):
+            bits[(part["present"] == 0) & hop.locked] |= np.uint32(Fault.WEAK_SIGNAL)
         return Moment(
             channels=self.names,
             span=span,

@@ -161,3 +161,16 @@ def test_a_carrier_that_changes_level_is_not_over_modulated(
     assert kept.events == []
     assert np.nanmax(kept.of("modulation_positive_peak_ratio")) < 1.3
     assert np.nanmax(kept.of("modulation_negative_peak_ratio")) < 1.0
+
+
+def test_a_carrier_far_below_its_level_is_lost_and_its_readings_are_invalid() -> None:
+    """15 dB down with plenty of C/N0 left: a driver without its final stage."""
+    t = signals.times(RATE_HZ, signals.frames_of(RATE_HZ, 9.0))
+    envelope = np.where(t > 4.0, 10 ** (-15 / 20), 1.0) * (1 + signals.tone(0.5, 700.0, t))
+    kept = run(transmitted(envelope - 1, 9.0), RATE_HZ)
+    assert kept.kinds() == ["carrier-loss"]
+    assert kept.events[0].started_s == pytest.approx(4.0, abs=0.15)
+    for reading in kept.readings[5:]:
+        assert not reading.valid[0]
+        assert reading.values["carrier_present"][0] == 0
+        assert np.isnan(reading.values["carrier_level_dbfs"][0])

@@ -27,6 +27,7 @@ _LONGEST_S = 0.025
 _PARABOLA = 0.95 / 3
 _AT_ZERO = 0.006
 _RISING = 1.1
+_LEAP = 2.0  # no modulation doubles the carrier from one hop to the next
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,6 +74,7 @@ class ExcursionMeter:
     def process(self, detected: Detected) -> Mapping[str, Precise]:
         """See stage.Meter."""
         usable = detected.settled & ~detected.broken & peaks_mean_something(detected, self._bank)
+        usable &= detected.hop_amplitude < _LEAP * (2 * detected.recent_amplitude - detected.hop_amplitude)
         judged, self._usable = usable & self._usable, usable  # a trough may have begun in the hop before
         clear = np.maximum(CLEAR_SIGMA * detected.sigma, _CLEAR_LEAST)
         over_s, over_span_s = self._above(detected, judged, clear)
