@@ -3,6 +3,7 @@
 import argparse
 import logging
 import os
+import signal
 import sys
 from collections.abc import Sequence
 from pathlib import Path
@@ -40,6 +41,7 @@ def replay(arguments: argparse.Namespace) -> int:
     """The chain over recordings."""
     from monitord.replay import Replay, writer_for
 
+    signal.signal(signal.SIGTERM, signal.default_int_handler)  # stopped either way, the summary is written
     writer = writer_for(arguments.format, sys.stdout)
     good = Replay(writer, arguments.settings, arguments.every).run(arguments.recording)
     sys.stdout.flush()

@@ -124,7 +124,7 @@ class Detected:
     phase: carrier phase less that of the nominal carrier, rad, unwrapped while locked, float64
         (channels, steps), at the middle of `steps` equal parts of the hop.
     offset_hz: carrier frequency less the nominal one, as the loop holds it (channels,).
-    searched: enough has been heard to say whether there is a carrier (channels,).
+    glimpse: amplitude of a line within reach that this hop shows while none is followed safely, else 0 (channels,).
     locked: the carrier loop holds a carrier (channels,).
     settled: locked, and enough has been averaged for the amplitude to be exact (channels,).
     broken: the carrier was interrupted within this hop (channels,).
@@ -141,7 +141,7 @@ class Detected:
     sigma: Precise
     phase: Precise
     offset_hz: Precise
-    searched: Flags
+    glimpse: Precise
     locked: Flags
     settled: Flags
     broken: Flags

@@ -25,6 +25,7 @@ from monitord.settings import Channel, Settings, Source, check_span, load
 from monitord.stage import Outlet, SampleSource
 
 _SEARCH_S = 2.0
+_CLEAR_OF_MEDIAN = 100.0
 _ROUND_HZ, _ROUND_WITHIN_HZ = 100.0, 25.0  # broadcast and standard carriers stand on round frequencies
 MIN_BANDWIDTH_HZ = 100.0
 _NEAR_ZERO_HZ = 20.0  # of a real IF, where only an offset or hum can be
@@ -90,6 +91,10 @@ class Replay:
         for recording in recordings:
             try:
                 self._one(recording)
+            except KeyboardInterrupt:
+                print(f"monitord: stopped within {recording}", file=sys.stderr)  # noqa: T201 - the way to the user
+                good = False
+                break
             except ConfigError:
                 raise
             except MonitordError as error:
@@ -136,6 +141,8 @@ class Replay:
                     chain.process(block)
                     progress.update(block.end / block.rate_hz - end_s)
                     end_s = block.end / block.rate_hz
+            if end_s * 2 < self._every_s:
+                _log.warning("%s: %.3f s are too short for a reading", settings.source.path, end_s)
         finally:
             if chain is not None:
                 chain.finish()
@@ -181,6 +188,10 @@ def strongest_carrier(source: SampleSource, name: str) -> Channel:
     first = pieces[0]
     wave = np.concatenate([block.samples for block in pieces])
     power = np.abs(scipy.fft.fft(wave * np.hanning(len(wave)))) ** 2
+    if power.max() <= _CLEAR_OF_MEDIAN * np.median(power):
+        raise RecordingError(
+            f"{name}: no carrier stands out of its first {_SEARCH_S:g} s; name a channel in --settings"
+        )
     offset_hz = scipy.fft.fftfreq(len(wave), 1 / first.rate_hz)
     if not np.iscomplexobj(wave):
         power[offset_hz < _NEAR_ZERO_HZ] = 0

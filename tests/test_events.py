@@ -174,3 +174,18 @@ def test_a_carrier_far_below_its_level_is_lost_and_its_readings_are_invalid() ->
         assert not reading.valid[0]
         assert reading.values["carrier_present"][0] == 0
         assert np.isnan(reading.values["carrier_level_dbfs"][0])
+
+
+@pytest.mark.parametrize("loss_after_s", [0.2, 0.3, 0.5])
+@pytest.mark.parametrize("begin_s", [3.0, 3.025, 3.05, 3.075])
+def test_a_break_shorter_than_its_time_is_no_loss_and_a_longer_one_is(
+    loss_after_s: float, begin_s: float
+) -> None:
+    for length_s, kinds in ((loss_after_s - 0.05, []), (loss_after_s + 0.25, ["carrier-loss"])):
+        breaks = [(begin_s, begin_s + length_s)]
+        kept = run(
+            transmitted(toned(0.6, 500.0, 5.5), 5.5, 60.0, breaks=breaks),
+            RATE_HZ,
+            [channel(loss_after_s=loss_after_s)],
+        )
+        assert kept.kinds() == kinds

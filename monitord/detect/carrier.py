@@ -25,6 +25,7 @@ _BREAK_BELOW = 0.1
 _NOISE_SMOOTHING = 0.2
 _MOST_ANGLE = 1.0
 _COHERENT = 0.08  # bass of 120 % leaves 0.58, noise alone 1/24
+_OUTDONE, _DOUBT_HOPS = 0.35, 10  # a stronger line nearby for a second: search again
 _SETTLED_HOPS = 5  # the carrier's mean is exact from half a second on
 _LEAST_AMPLITUDE = 1e-12  # -240 dBFS: keeps the divisions by an amplitude defined where there is none
 
@@ -66,6 +67,7 @@ class CarrierRecovery:
         self._tracking = np.zeros(count, bool)
         self._good = np.zeros(count, np.int64)
         self._bad = np.zeros(count, np.int64)
+        self._doubts = np.zeros(count, np.int64)
         self._last_hop = np.zeros(count)
         self._low_run = np.zeros(count, np.int64)
         self._smooth_noise = np.full(count, np.nan)
@@ -95,8 +97,9 @@ class CarrierRecovery:
         hop_amplitude = np.where(self._tracking, np.abs(line), 0.0)
         recent_amplitude = (hop_amplitude + np.where(self._good > 1, self._last_hop, hop_amplitude)) / 2
         self._last_hop = hop_amplitude
+        glimpse = self._seek(baseband.samples)
         scale = (1 / amplitude).astype(np.float32)[:, None]
-        detected = Detected(
+        return Detected(
             in_phase=in_phase(samples, baseband.samples) * scale,
             quadrature=samples.imag * scale,
             rate_hz=self._rate_hz,
@@ -108,13 +111,11 @@ class CarrierRecovery:
             sigma=sigma,
             phase=phase + steps.imag / np.maximum(self._amplitude, _LEAST_AMPLITUDE)[:, None],
             offset_hz=np.where(locked, self._speed / (2 * np.pi), np.nan),
-            searched=self._tracking | self._search.ready,
+            glimpse=glimpse,
             locked=locked,
             settled=settled,
             broken=broken,
         )
-        self._seek(baseband.samples)
-        return detected
 
     def _averaged_steps(self, samples: Complex) -> Steps:
         """The hop turned by the predicted phase and averaged over each step, complex128 (channels, STEPS)."""
@@ -167,7 +168,8 @@ class CarrierRecovery:
         self._good = np.where(self._tracking & shown, self._good + 1, 0)
         self._bad = np.where(self._tracking & ~shown, self._bad + 1, 0)
         away = np.abs(self._speed) / (2 * np.pi) > 1.05 * self._acquire_hz + 2
-        lost = self._tracking & ((self._bad >= _CONFIRMED_AFTER) | away)
+        self._doubts = np.where(self._tracking & (power < _OUTDONE * near), self._doubts + 1, 0)
+        lost = self._tracking & ((self._bad >= _CONFIRMED_AFTER) | away | (self._doubts >= _DOUBT_HOPS))
         self._tracking = self._tracking & ~lost
         smooth = self._smooth_noise + _NOISE_SMOOTHING * (noise - self._smooth_noise)
         self._smooth_noise = np.where(np.isfinite(smooth), smooth, noise)
@@ -182,12 +184,13 @@ class CarrierRecovery:
         fresh = self._amplitude + 0.3 * (np.abs(line) - self._amplitude)
         self._amplitude = np.where(self._good > 0, fresh, self._amplitude)
 
-    def _seek(self, samples: Complex) -> None:
-        """Search where nothing is tracked; what is found is tracked from the next hop on."""
+    def _seek(self, samples: Complex) -> Precise:
+        """Search where nothing is tracked; what is found is tracked from the next hop on. Also what is glimpsed."""
         self._search.listen(samples, ~self._tracking | (self._bad > 0))
+        glimpse = self._search.glimpse()
         rows = ~self._tracking & self._search.ready
         if not rows.any():
-            return
+            return glimpse
         line = self._search.find(rows)
         new = np.zeros(self._channels, bool)
         new[rows] = line.found
@@ -197,4 +200,6 @@ class CarrierRecovery:
         self._tracking = self._tracking | new
         self._good[new] = 0
         self._bad[new] = 0
+        self._doubts[new] = 0
         self._mean.begin(new, line.in_phase[line.found], line.steady[line.found])
+        return glimpse

@@ -55,6 +55,9 @@ class LineSearch:
         self._offset_hz = scipy.fft.fftfreq(size, 1 / self.rate_hz)
         near = np.flatnonzero(np.abs(self._offset_hz) <= acquire_hz + 2 * self.rate_hz / count)
         self._near = near[np.argsort(self._offset_hz[near])]
+        self._short_window = np.hanning(parts + 1)[:-1]
+        short_hz = np.abs(scipy.fft.fftfreq(_ZERO_PADDING * parts, 1 / self.rate_hz))
+        self._short_near = np.flatnonzero(short_hz <= acquire_hz + 2 * self.rate_hz / parts)
         self._droop = np.sinc(self._offset_hz / self.rate_hz)  # of summing over a part
         self._time = (np.arange(count) + 0.5 - count) / self.rate_hz
 
@@ -71,6 +74,18 @@ class LineSearch:
     def ready(self) -> Flags:
         """Rows that have been listened to for long enough (channels,)."""
         return self._heard >= HOPS
+
+    def glimpse(self) -> Precise:
+        """Amplitude of the line that the last hop alone shows, full scale = 1; 0 where none or not listening."""
+        seen = self._heard > 0
+        amplitude = np.zeros(len(seen))
+        if seen.any():
+            wave = self._past[seen, -self._parts :] * self._short_window
+            power = np.square(np.abs(scipy.fft.fft(wave, _ZERO_PADDING * self._parts, axis=1)))
+            near = power[:, self._short_near].max(axis=1)
+            clear = near > _CLEAR_OF_MEDIAN * np.median(power, axis=1)
+            amplitude[seen] = np.sqrt(near * clear) / self._short_window.sum()
+        return amplitude
 
     def find(self, rows: Flags) -> Line:
         """Search the given rows (a mask over the channels)."""

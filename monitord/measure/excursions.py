@@ -105,8 +105,9 @@ class ExcursionMeter:
         """Negative excursions in the troughs that ended within this hop."""
         count = len(judged)
         spent, span, cut = np.zeros(count), np.full((count, 2), np.nan), np.zeros(count, bool)
-        level = np.maximum(np.maximum(_TROUGH_BELOW, 2 * clear), 1 - self._negative)
-        judged = judged & (level < 0.6)
+        level = np.maximum(_TROUGH_BELOW, 2 * clear)
+        judged = judged & (level < 0.6)  # else noise alone goes that deep
+        level = np.maximum(level, 1 - self._negative)
         lowest = np.fmin(detected.in_phase.min(axis=1), self._tail.min(axis=1))
         near = np.maximum(_AT_ZERO + 4.3 * detected.sigma, 1 - self._negative - clear)
         rows = np.flatnonzero(judged & (lowest < near))  # elsewhere neither verdict is possible

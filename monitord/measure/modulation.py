@@ -76,6 +76,10 @@ class ModulationMeter:
         self._peaks = np.full((self._slots, 2, count), np.nan)  # a ring: `_place` holds the newest
         self._raw = np.full((self._slots, 2, count), np.nan)  # the same peaks, in-phase, full scale = 1
         self._count = np.ones((self._slots, 2, count))  # independent samples near each peak
+        self._later = np.full(
+            (self._slots, 2, count), np.nan
+        )  # mean square and mean that wait for the carrier's mean
+        self._level = np.full((self._slots, count), np.nan)  # the carrier's amplitude as it was taken
         self._recent = np.full((self._slots, count), np.nan)  # the carrier's amplitude about then
         self._sigma = np.full((self._slots, count), np.nan)  # of the reception noise
         self._place = 0
@@ -87,6 +91,7 @@ class ModulationMeter:
         count = len(self._bank.channels)
         self._square = np.zeros(count)
         self._square_hops = np.zeros(count)
+        self._heard = np.zeros(count, bool)
 
     def process(self, detected: Detected) -> Mapping[str, Precise]:
         """See stage.Meter."""
@@ -98,10 +103,15 @@ class ModulationMeter:
         noise_power = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         sigma = np.sqrt(noise_power)
         count = self._near_top(wave, highest, lowest, sigma)
-        self._remember(peaks, count, sigma, detected)
+        moving = np.abs(detected.recent_amplitude / detected.amplitude - 1) > _MOVING
+        moving &= self._average_hops > 1
+        self._remember(np.where(moving, np.nan, peaks), count, sigma, detected)
+        self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
         square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - noise_power
-        self._square += np.where(usable, square, 0)
-        self._square_hops += usable
+        self._add_square(square, usable & ~moving)
+        self._later[self._place] = np.where(usable & moving, [square, wave.mean(axis=1)], np.nan)
+        self._heard |= usable
+        self._center(detected.amplitude)
         self._true.advance()
         peaks = peaks - lift(count) * sigma
         return {"positive_peak": peaks[0], "negative_peak": peaks[1]}
@@ -118,15 +128,16 @@ class ModulationMeter:
         self._peaks[self._place, :, detected.broken] = np.nan
         self._raw[self._place, :, detected.broken] = np.nan
         self._place = (self._place + 1) % self._slots
-        moving = np.abs(detected.recent_amplitude / detected.amplitude - 1) > _MOVING
-        self._peaks[self._place] = np.where(moving & (self._average_hops > 1), np.nan, peaks)
+        self._peaks[self._place] = peaks
+        self._level[self._place] = detected.amplitude
         self._recent[self._place] = detected.recent_amplitude
         self._count[self._place] = count
         self._sigma[self._place] = sigma
-        self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
-        self._valid_hops += np.isfinite(peaks[0])
-        self._center(detected.amplitude)
-        self._amplitude = detected.amplitude
+
+    def _add_square(self, square: Precise, use: Flags) -> None:
+        """Add a hop's mean square to the interval, in the rows to be used."""
+        self._square += np.where(use, square, 0)
+        self._square_hops += use
 
     def _center(self, amplitude: Precise) -> None:
         """Refer the peaks of half an averaging time ago to the carrier's mean around them, now that it is known.
@@ -135,24 +146,30 @@ class ModulationMeter:
         wait until they can be referred to what was there. Where it leapt, no mean is right.
         """
         half = self._average_hops // 2
-        if half == 0:
-            return
         around = amplitude if self._average_hops % 2 else (amplitude + self._amplitude) / 2
+        self._amplitude = amplitude
         place = (self._place - half) % self._slots
         centered = (self._raw[place] / around - 1) * [[1], [-1]]
         self._peaks[place] = np.where(np.isfinite(around), centered, self._peaks[place])
-        about = (place + np.array([-1, 0, 1])) % self._slots
+        about = (place + np.arange(-1, min(half, 1) + 1)) % self._slots
         leapt = (np.abs(self._recent[about] / around - 1) > _LEAPT).any(axis=0)
         self._peaks[place, :, leapt] = np.nan
+        self._valid_hops += np.isfinite(self._peaks[place, 0])
+        # The same for the squares that waited: (1 + m) in units of the carrier then, g times that of the carrier now.
+        square, mean = self._later[place]
+        g = self._level[place] / around
+        square = g**2 * (1 + 2 * mean + square) - 2 * g * (1 + mean) + 1
+        self._add_square(square, np.isfinite(square) & ~leapt)
 
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
-        heard = self._square_hops > 0  # nothing of the past stands for an interval without a valid hop
+        heard = self._heard  # nothing of the past stands for an interval without a valid hop
         window = (self._place - np.arange(self._window)) % self._slots
         largest = corrected_largest(self._peaks[window], self._count[window], self._sigma[self._place])
         positive, negative = np.where(heard, largest, np.nan)
         recurring = self._recurring(heard)
-        mean = np.divide(self._square, self._square_hops, out=np.full(heard.shape, np.nan), where=heard)
+        known = heard & (self._square_hops > 0)
+        mean = np.divide(self._square, self._square_hops, out=np.full(heard.shape, np.nan), where=known)
         self._begin()
         return {
             "modulation_positive_peak_ratio": positive,

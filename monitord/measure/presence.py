@@ -90,16 +90,21 @@ class Presence:
         self._age_s += self._hop_s
         here = self._here(detected)
         if not (here & (self.state == 1)).all() or self._absent_s.any():
-            self._count(here, detected.searched)
+            self._count(here, detected)
         steady = here & (self.state == 1) & detected.settled & ~detected.broken
         self.reference.learn(detected.amplitude, steady)
 
-    def _count(self, here: Flags, searched: Flags) -> None:
-        """For how long each row has been there or not, and what follows from it."""
+    def _count(self, here: Flags, detected: Detected) -> None:
+        """For how long each row has been there or not, and what follows from it.
+
+        A line that is only glimpsed is being acquired: that is no time of absence, nor yet of presence.
+        """
+        glimpsed = self._at_level(np.square(detected.glimpse)) & (detected.glimpse > 0)
         hop_s, slack_s = self._hop_s, self._hop_s / 2
         self._here_s = np.where(here, self._here_s + hop_s, 0)
-        self._absent_s = np.where(here, 0, self._absent_s + hop_s)
-        lost = searched & (self._absent_s + slack_s > self._loss_after_s)
+        self._absent_s = np.where(here, 0, self._absent_s + hop_s * ~glimpsed)
+        # The first and the last hop may be absent in part only: never told early, a hop late at most.
+        lost = ~glimpsed & (self._absent_s - slack_s > self._loss_after_s)
         lost &= ~here & ((self.state == 1) | (self._age_s + slack_s > _JUDGE_AFTER_S))
         back = self._here_s + slack_s > RETURN_S
         self.state = np.where(lost, 0, np.where(back, 1, self.state)).astype(np.int8)
@@ -109,6 +114,10 @@ class Presence:
         power = np.square(detected.hop_amplitude) - detected.noise_density / self._hop_s
         power /= np.where(self.state == 0, _HYSTERESIS, 1)
         here = power > self._enough * detected.noise_density
-        if self._fixed_gain:
-            here &= ~(power < self.reference.working_power * self._drop)
-        return np.asarray(here)
+        return np.asarray(here & self._at_level(power))
+
+    def _at_level(self, power: Precise) -> Flags:
+        """Not too far below the reference, where the gain is fixed and there is a reference (channels,)."""
+        if not self._fixed_gain:
+            return np.ones(len(power), bool)
+        return ~(power < self.reference.working_power * self._drop)

@@ -17,6 +17,8 @@ class SourceRule:
     def __init__(self) -> None:
         self._episodes = Episodes()
         self._last_gap_s = 0.0
+        self._stream = 0
+        self._lost_at_s = self._silent_since = 0.0
 
     @property
     def lost(self) -> bool:
@@ -25,10 +27,16 @@ class SourceRule:
 
     def block(self, block: Block) -> Sequence[Event]:
         """Take a block that came."""
-        events = []
+        events: list[Event] = []
         start_s = block.start / block.rate_hz
         if self.lost:
-            events.append(self._episodes.end(LOST, None, None, start_s))
+            # By the clock: the count of samples may have stood still, or begun anew.
+            away_s = time.monotonic() - self._silent_since
+            events.append(self._episodes.end(LOST, None, None, self._lost_at_s + away_s))
+        if block.stream != self._stream:
+            self._stream = block.stream
+            if self._episodes.is_open(GAP, None):
+                events.append(self._episodes.end(GAP, None, None, self._last_gap_s))
         if block.lost:
             events += self._gap(block, start_s)
         elif self._episodes.is_open(GAP, None) and start_s - self._last_gap_s > GAP_HOLD_S:
@@ -53,6 +61,7 @@ class SourceRule:
         """Nothing has come for `age_s`; the last sample was `last_s` seconds into the stream, at `last_utc`."""
         if age_s < LOST_AFTER_S or self.lost:
             return ()
+        self._lost_at_s, self._silent_since = last_s, time.monotonic() - age_s
         return (self._episodes.begin(LOST, None, None, last_s, started_utc=last_utc, limit=LOST_AFTER_S),)
 
     def started(self) -> Sequence[Event]:

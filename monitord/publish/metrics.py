@@ -161,7 +161,9 @@ class MetricsPage:
             lost = self._daemon.lost
         # Outside the lock: it reads files of the process, and the chain must not wait for that.
         parts = [self._daemon.text(openmetrics)]
-        parts += [family.text(table[family.name], openmetrics) for family in self._states]
+        # Why a reading is not to be trusted means nothing while there is none.
+        states = [family for family in self._states if not (lost and family.name == "reading_fault")]
+        parts += [family.text(table[family.name], openmetrics) for family in states]
         for quantity, family in self._quantities:
             parts.append(family.text(self._values(quantity, family, reading, lost), openmetrics))
         if openmetrics:

@@ -62,7 +62,7 @@ def load(path: str | Path, *, recording: str | None = None) -> Settings:
     Raises ConfigError with every problem, also where the file cannot be read.
     """
     try:
-        text = Path(path).read_bytes().decode("utf-8")
+        text = Path(path).read_bytes().decode("utf-8-sig")
     except OSError as error:
         raise ConfigError([f"{path}: cannot be read: {error.strerror}; must be a settings file"]) from error
     except UnicodeDecodeError as error:
