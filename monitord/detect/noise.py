@@ -10,6 +10,8 @@ import scipy.fft
 from monitord.blocks import Precise, Real
 
 _CLEAR_OF_CARRIER_HZ = 100.0
+_QUARTERS = 4
+_LEAST_BINS = 64  # fewer scatter too much for their medians to be compared
 _FLOAT32_FLOOR = 1e-16  # density re carrier power below which only single-precision rounding is measured
 
 
@@ -34,9 +36,23 @@ class QuadratureNoise:
         spectrum = scipy.fft.rfft(quadrature * self._window, axis=1)[:, self._bins]
         power = np.square(spectrum.real) + np.square(spectrum.imag)
         mean = power.mean(axis=1, dtype=np.float64) * (self._scale * np.log(2))
-        middle = power.shape[1] // 2
-        power.partition(middle, axis=1)
-        return np.asarray(power[:, middle] * self._scale, np.float64), mean
+        return np.asarray(_reception(power) * self._scale, np.float64), mean
+
+
+def _reception(power: Real) -> Real:
+    """Median over the bins; where the quarters of the band differ by 3 dB, that of the quietest (channels,).
+
+    Reception noise is flat. What is not (phase modulation that follows the programme, another station's
+    sidebands) must not be taken for it, or peaks are corrected for noise that is not there.
+    """
+    rows, bins = power.shape
+    each = bins // _QUARTERS
+    if each < _LEAST_BINS:
+        return np.asarray(np.partition(power, bins // 2, axis=1)[:, bins // 2])
+    quarters = power[:, : each * _QUARTERS].reshape(rows, _QUARTERS, each)
+    medians = np.partition(quarters, each // 2, axis=2)[:, :, each // 2]
+    quietest = medians.min(axis=1)
+    return np.asarray(np.where(medians.max(axis=1) > 2 * quietest, quietest, medians.mean(axis=1)))
 
 
 def with_floor(density: Precise, amplitude: Precise) -> Precise:

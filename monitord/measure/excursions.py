@@ -135,9 +135,10 @@ class ExcursionMeter:
         sigma = detected.sigma[row]
         samples = np.maximum(trough.width / self._resolution * 2, 1)
         spread = sigma / np.sqrt(samples)
-        cut = recent & ~reversed_ & (self._negative[row] <= 1) & (trough.width >= 1.2 * self._resolution)
+        cut = recent & (self._negative[row] <= 1) & (trough.width >= 1.2 * self._resolution)
         cut &= trough.mean + CLEAR_SIGMA * spread < _PARABOLA * level[row]
-        cut &= trough.core < _AT_ZERO + 1.3 * sigma + 3 * spread
+        cut &= np.abs(trough.core) < _AT_ZERO + 1.3 * sigma + 3 * spread
+        reversed_ &= ~cut  # a core at zero: what goes below it is the channel filter's ringing at the corners
         floor = np.where(reversed_, 1 - self._negative[row] - clear[row], np.maximum(0.02, 3 * sigma))
         deep = wave < _per_row(floor, trough.row, reversed_ | cut, len(rows))[:, None]
         depth = np.concatenate([np.zeros((len(rows), 1)), np.cumsum(deep, axis=1)], axis=1)

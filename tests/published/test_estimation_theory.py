@@ -141,3 +141,16 @@ def test_a_50_hz_tone_does_not_move_the_carriers_mean() -> None:
         for part in wave.reshape(25, 1, frames):
             mean.take(part, np.ones(1, bool))
         assert 20 * np.log10(mean.mean[0]) == pytest.approx(0, abs=0.002)
+
+
+@pytest.mark.parametrize("quadrature_db", [-60.0, -40.0, -30.0])
+def test_what_lives_in_quadrature_is_not_taken_off_the_peaks(quadrature_db: float) -> None:
+    """A 3 kHz wide signal in quadrature is no reception noise: a 50 % tone stays 50 % (closed form), within 0.003."""
+    t = signals.times(RATE_HZ, signals.frames_of(RATE_HZ, 5.0))
+    other = signals.programme_like(RATE_HZ, 5.0, band_hz=3_000, seed=9)
+    wave = 1 + signals.tone(0.5, 700.0, t) + 1j * 10 ** (quadrature_db / 20) * other.modulation / other.rms
+    noise = np.random.default_rng(1).standard_normal((len(t), 2)) @ [1, 1j] * np.sqrt(RATE_HZ / 1e10 / 2)
+    kept = run(0.1 * (wave * np.exp(2j * np.pi * (CARRIER_HZ + 3) * t) + noise), RATE_HZ)
+    assert kept.last("modulation_positive_peak_ratio") == pytest.approx(0.5, abs=0.003)
+    assert kept.last("modulation_negative_peak_ratio") == pytest.approx(0.5, abs=0.003)
+    assert kept.last("carrier_to_noise_density_dbhz") == pytest.approx(100, abs=0.5)
