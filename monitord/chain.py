@@ -18,11 +18,13 @@ from numpy.typing import NDArray
 from monitord.blocks import Baseband, Block, Detected, Event, Fault, Moment, Precise, Reading, Span
 from monitord.condition.tuner import Tuner
 from monitord.detect import DETECTORS
+from monitord.errors import ConfigError
 from monitord.measure import METERS
 from monitord.measure.validity import FaultJudge
+from monitord.notice import RULES
 from monitord.publish.tally import Tally
 from monitord.quantities import Quantity
-from monitord.settings import Channel, Source
+from monitord.settings import Channel, Settings, Source, check_span
 from monitord.stage import Bank, Meter, Outlet, Rule
 
 INTERVAL_S = 1.0
@@ -181,6 +183,25 @@ class Chain:
             tally.stage_failures.setdefault(make.__name__, 0)
         for stage in ("condition", "detect", "measure", "notice", "publish"):
             tally.stage_seconds.setdefault(stage, 0.0)
+
+    @classmethod
+    def beginning_with(
+        cls,
+        block: Block,
+        settings: Settings,
+        outlets: Sequence[Outlet],
+        tally: Tally,
+        interval_s: float = INTERVAL_S,
+    ) -> "Chain":
+        """The chain, with all rules, for the stream that begins with `block`.
+
+        Raises ConfigError with every channel that lies outside the stream.
+        """
+        stream = Stream.of(block, settings.source)
+        problems = check_span(settings, stream.rate_hz, stream.center_hz, stream.real)
+        if problems:
+            raise ConfigError(problems)
+        return cls(settings.channels, stream, [make() for make in RULES], outlets, tally, interval_s)
 
     @property
     def wanted(self) -> int:

@@ -13,15 +13,14 @@ from tqdm import tqdm
 
 from monitord.acquire import make_source
 from monitord.blocks import Block, Event, Moment, Reading
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.errors import ConfigError, MonitordError, RecordingError
 from monitord.measure import QUANTITIES
-from monitord.notice import RULES
 from monitord.publish.lines import Csv, JsonLines
 from monitord.publish.table import Table
 from monitord.publish.tally import Tally
 from monitord.service import count_block
-from monitord.settings import Channel, Settings, Source, check_span, load
+from monitord.settings import Channel, Settings, Source, load
 from monitord.stage import Outlet, SampleSource
 
 _SEARCH_S = 2.0
@@ -131,12 +130,15 @@ class Replay:
             self._through(source, settings)
 
     def _through(self, source: SampleSource, settings: Settings) -> None:
+        outlets = (self._writer, self._counter)
         chain: Chain | None = None
         end_s = 0.0
         try:
             with tqdm(unit="s", unit_scale=True, disable=not sys.stderr.isatty(), leave=False) as progress:
                 for block in _blocks(source):
-                    chain = chain or self._chain_for(block, settings)
+                    chain = chain or Chain.beginning_with(
+                        block, settings, outlets, self._tally, self._every_s
+                    )
                     count_block(self._tally, block)
                     chain.process(block)
                     progress.update(block.end / block.rate_hz - end_s)
@@ -147,16 +149,6 @@ class Replay:
             if chain is not None:
                 chain.finish()
             self._seconds += end_s
-
-    def _chain_for(self, block: Block, settings: Settings) -> Chain:
-        stream = Stream.of(block, settings.source)
-        problems = check_span(settings, stream.rate_hz, stream.center_hz, stream.real)
-        if problems:
-            raise ConfigError(problems)
-        rules = [make() for make in RULES]
-        return Chain(
-            settings.channels, stream, rules, (self._writer, self._counter), self._tally, self._every_s
-        )
 
 
 def _blocks(source: SampleSource) -> Iterator[Block]:

@@ -12,16 +12,15 @@ import numpy as np
 from monitord import __version__
 from monitord.acquire import make_source
 from monitord.blocks import LOSS_REASONS, Block, Event
-from monitord.chain import Chain, Stream
-from monitord.errors import ConfigError, SourceLost
+from monitord.chain import Chain
+from monitord.errors import SourceLost
 from monitord.measure import QUANTITIES
-from monitord.notice import RULES
 from monitord.notice.source import SourceRule
 from monitord.publish.eventlog import EventLog
 from monitord.publish.metrics import MetricsPage
 from monitord.publish.tally import Tally
 from monitord.publish.web import WebServer
-from monitord.settings import Settings, check_span
+from monitord.settings import Settings
 from monitord.stage import Outlet, SampleSource
 
 TICK_S = 0.5
@@ -155,7 +154,7 @@ class Service:
         self._tell(self._watch.block(block))
         count_block(tally, block)
         if self._chain is None:
-            self._chain = self._chain_for(block)
+            self._chain = Chain.beginning_with(block, self._settings, self._outlets, self._tally)
         self._chain.process(block)
         self._last_s, self._last_utc = block.end / block.rate_hz, _end_utc(block)
         now_s = time.monotonic()
@@ -176,15 +175,6 @@ class Service:
             self._tally.up = False
             self._page.source_lost()
             self._tell(events)
-
-    def _chain_for(self, block: Block) -> Chain:
-        """The chain for the stream that begins with this block. Raises ConfigError where a channel lies outside it."""
-        settings = self._settings
-        stream = Stream.of(block, settings.source)
-        problems = check_span(settings, stream.rate_hz, stream.center_hz, stream.real)
-        if problems:
-            raise ConfigError(problems)
-        return Chain(settings.channels, stream, [make() for make in RULES], self._outlets, self._tally)
 
     def _tell(self, events: Sequence[Event]) -> None:
         for event in events:

@@ -28,9 +28,9 @@ class QuadratureNoise:
         self._scale = 2 / (rate_hz * power * np.log(2))
 
     def density(self, quadrature: Real) -> tuple[Precise, Precise]:
-        """Power per Hz of the complex baseband, full scale = 1: median and mean over the bins, float64 (channels,).
+        """Power per Hz of the complex baseband, full scale = 1, float64 (channels,): reception noise, and all there is.
 
-        The median is that of the reception noise; the mean has all that disturbs, impulses and lines too.
+        The first comes from medians over the bins; the second, their mean, has impulses and lines in it too.
         quadrature: float32 (channels, frames), full scale = 1.
         """
         spectrum = scipy.fft.rfft(quadrature * self._window, axis=1)[:, self._bins]
@@ -40,7 +40,7 @@ class QuadratureNoise:
 
 
 def _reception(power: Real) -> Real:
-    """Median over the bins; where the quarters of the band differ by 3 dB, that of the quietest (channels,).
+    """Mean of the medians of the band's quarters; where these differ by 3 dB, that of the quietest (channels,).
 
     Reception noise is flat. What is not (phase modulation that follows the programme, another station's
     sidebands) must not be taken for it, or peaks are corrected for noise that is not there.

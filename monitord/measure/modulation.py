@@ -76,9 +76,7 @@ class ModulationMeter:
         self._peaks = np.full((self._slots, 2, count), np.nan)  # a ring: `_place` holds the newest
         self._raw = np.full((self._slots, 2, count), np.nan)  # the same peaks, in-phase, full scale = 1
         self._count = np.ones((self._slots, 2, count))  # independent samples near each peak
-        self._later = np.full(
-            (self._slots, 2, count), np.nan
-        )  # mean square and mean that wait for the carrier's mean
+        self._later = np.full((self._slots, 2, count), np.nan)  # mean square and mean that wait for `_center`
         self._level = np.full((self._slots, count), np.nan)  # the carrier's amplitude as it was taken
         self._recent = np.full((self._slots, count), np.nan)  # the carrier's amplitude about then
         self._sigma = np.full((self._slots, count), np.nan)  # of the reception noise
@@ -127,6 +125,7 @@ class ModulationMeter:
         # A cut is known for sure only in the hop after the one in which it began.
         self._peaks[self._place, :, detected.broken] = np.nan
         self._raw[self._place, :, detected.broken] = np.nan
+        self._later[self._place, :, detected.broken] = np.nan
         self._place = (self._place + 1) % self._slots
         self._peaks[self._place] = peaks
         self._level[self._place] = detected.amplitude

@@ -1,21 +1,12 @@
 """The off-air recordings open with the rate, centre and length that their index states."""
 
-import os
-from pathlib import Path
-
 import numpy as np
 import pytest
 
+from tests import data
 from tests.acquire.recordings import read_all, samples_of
 
-DATA = (
-    Path(os.environ.get("MONITORD_TEST_DATA", Path(__file__).parents[2].parent / "shared" / "data"))
-    / "off-air"
-)
-needs_data = pytest.mark.skipif(not DATA.is_dir(), reason=f"the off-air recordings are not there ({DATA})")
 
-
-@needs_data
 @pytest.mark.parametrize(
     ("name", "rate_hz", "seconds", "utc"),
     [
@@ -26,19 +17,18 @@ needs_data = pytest.mark.skipif(not DATA.is_dir(), reason=f"the off-air recordin
 def test_an_lf_recording_is_iq_around_its_carrier(
     name: str, rate_hz: float, seconds: float, utc: float
 ) -> None:
-    blocks, error = read_all(DATA / f"{name}.sigmf-meta")
+    blocks, error = read_all(data.path(f"off-air/{name}.sigmf-meta"))
     assert error == ""
     assert {(block.rate_hz, block.center_hz) for block in blocks} == {(rate_hz, 77500.0)}
     assert blocks[0].utc == utc
     wave = samples_of(blocks)
     assert len(wave) / rate_hz == pytest.approx(seconds, abs=0.05)
-    stored = np.fromfile(DATA / f"{name}.sigmf-data", "<i2")
+    stored = np.fromfile(data.path(f"off-air/{name}.sigmf-data"), "<i2")
     np.testing.assert_array_equal(wave.view(np.float32), (stored / 32768).astype(np.float32))
 
 
-@needs_data
 def test_the_hf_envelope_is_one_minute_of_floats_in_one_audio_channel() -> None:
-    blocks, error = read_all(DATA / "hf-voice-envelope.wav")
+    blocks, error = read_all(data.path("off-air/hf-voice-envelope.wav"))
     assert error == ""
     wave = samples_of(blocks)
     assert (wave.dtype, len(wave), blocks[0].rate_hz, blocks[0].center_hz) == (
