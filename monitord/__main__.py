@@ -39,10 +39,11 @@ def check(arguments: argparse.Namespace) -> int:
 
 def replay(arguments: argparse.Namespace) -> int:
     """The chain over recordings."""
-    from monitord.replay import Replay, writer_for
+    from monitord.replay import Replay, channels_named, writer_for
 
     signal.signal(signal.SIGTERM, signal.default_int_handler)  # stopped either way, the summary is written
-    writer = writer_for(arguments.format, sys.stdout)
+    channels = channels_named(arguments.settings, arguments.recording[0])
+    writer = writer_for(arguments.format, channels, sys.stdout)
     good = Replay(writer, arguments.settings, arguments.every).run(arguments.recording)
     sys.stdout.flush()
     return DONE if good else FAILED

@@ -6,8 +6,10 @@ Arrays handed on are read-only by agreement: a stage never writes into what it w
 from collections.abc import Mapping
 from dataclasses import dataclass
 from enum import IntFlag
+from functools import cache, cached_property
 
 import numpy as np
+import scipy.fft
 from numpy.typing import NDArray
 
 Complex = NDArray[np.complex64]
@@ -110,11 +112,64 @@ class Baseband:
     span: Span
 
 
+@cache
+def hann(frames: int) -> Real:
+    """Periodic Hann window of sum 2, float32 (frames,): a sinusoid of amplitude a has a line of height a."""
+    taper = np.hanning(frames + 1)[:-1]
+    return np.asarray(taper * (2 / taper.sum()), np.float32)
+
+
+@dataclass(frozen=True)
+class Second:
+    """Ten hops of one bank taken together, for what needs a finer resolution than a hop has.
+
+    The arrays are good until the next hop is detected.
+
+    in_phase: what the detector made of it, float32 (channels, frames), re the second's mean carrier: m = in_phase - 1.
+    coherent: the baseband turned to the carrier's phase, complex64 (channels, frames), re the same carrier.
+    amplitude: that carrier, the Hann-weighted mean over this second, full scale = 1 (channels,).
+    noise_density: mean reception noise, power per Hz re full scale (channels,).
+    usable: the carrier was held, settled and unbroken all through (channels,); other rows mean nothing.
+    """
+
+    in_phase: Real
+    coherent: Complex
+    rate_hz: float
+    amplitude: Precise
+    noise_density: Precise
+    usable: Flags
+
+    @property
+    def bin_hz(self) -> float:
+        """Spacing of the spectra's bins."""
+        return float(self.rate_hz / self.in_phase.shape[1])
+
+    @cached_property
+    def audio(self) -> Complex:
+        """Hann-windowed spectrum of m, complex64 (channels, frames // 2 + 1): a sinusoid of amplitude a is a line of a.
+
+        White noise of variance v gives bins of the mean power 6 v / frames (`BIN_POWER` v / frames).
+        """
+        return np.asarray(scipy.fft.rfft((self.in_phase - 1) * hann(self.in_phase.shape[1]), axis=1))
+
+    @cached_property
+    def quadrature(self) -> Complex:
+        """The same of the quadrature part."""
+        return np.asarray(scipy.fft.rfft(self.coherent.imag * hann(self.coherent.shape[1]), axis=1))
+
+
+BIN_POWER = 6.0
+"""Mean power of a bin of `Second.audio` for noise of the variance 1, times the frames: 4 x 1.5 (Harris 1978: ENBW)."""
+
+
 @dataclass(frozen=True, slots=True)
 class Detected:
     """One hop of one bank, detected.
 
-    in_phase, quadrature: float32 (channels, frames), the carrier scaled to 1; NaN rows where there is no carrier.
+    in_phase: what the detector made of it, float32 (channels, frames), the carrier scaled to 1; NaN rows where there is
+        no carrier.
+    coherent: the baseband turned to the carrier's phase, complex64 (channels, frames), in the same scale. Its real part
+        is what the synchronous detector gives, its magnitude the envelope.
     amplitude: carrier amplitude (channels,), full scale = 1; NaN where there is no carrier.
     hop_amplitude: amplitude of the carrier in this hop alone (channels,), never NaN.
     recent_amplitude: mean of this and the last hop's: lags less than `amplitude`, but moves with deep bass.
@@ -128,10 +183,11 @@ class Detected:
     locked: the carrier loop holds a carrier (channels,).
     settled: locked, and enough has been averaged for the amplitude to be exact (channels,).
     broken: the carrier was interrupted within this hop (channels,).
+    second: with every tenth hop since the stream began, these ten together; else None.
     """
 
     in_phase: Real
-    quadrature: Real
+    coherent: Complex
     rate_hz: float
     span: Span
     amplitude: Precise
@@ -145,6 +201,12 @@ class Detected:
     locked: Flags
     settled: Flags
     broken: Flags
+    second: Second | None = None
+
+    @property
+    def quadrature(self) -> Real:
+        """What is in quadrature to the carrier, float32 (channels, frames)."""
+        return self.coherent.imag
 
 
 @dataclass(frozen=True, slots=True)

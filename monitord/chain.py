@@ -19,7 +19,7 @@ from monitord.blocks import Baseband, Block, Detected, Event, Fault, Moment, Pre
 from monitord.condition.tuner import Tuner
 from monitord.detect import DETECTORS
 from monitord.errors import ConfigError
-from monitord.measure import METERS
+from monitord.measure import METERS, quantities_of
 from monitord.measure.validity import FaultJudge
 from monitord.notice import RULES
 from monitord.publish.tally import Tally
@@ -68,19 +68,18 @@ def banks_of(channels: Sequence[Channel]) -> list[list[Channel]]:
 class _BankChain:
     """Detector and meters of one bank, each meter behind a guard."""
 
-    def __init__(self, bank: Bank, tally: Tally) -> None:
+    def __init__(self, bank: Bank, quantities: Sequence[Quantity], tally: Tally) -> None:
         self.bank = bank
+        self._quantities = quantities
         self.judge = FaultJudge(bank)
         self._tally = tally
         self._detector = DETECTORS[bank.channels[0].detector]()
         self._detector.prepare(bank)
         self._meters: dict[str, Meter] = {}
-        self._quantities: tuple[Quantity, ...] = ()
         for make in METERS:
             meter = make()
             meter.prepare(bank)
             self._meters[type(meter).__name__] = meter
-            self._quantities += meter.quantities
         self._reported: set[str] = set()
         self._unknown = _unknown_fields(len(bank.channels))
 
@@ -104,9 +103,8 @@ class _BankChain:
 
     def reading(self) -> dict[str, Precise]:
         """All quantities of the interval; NaN those of a meter that failed."""
-        count = len(self.bank.channels)
         values = {
-            quantity.name: np.full((count, len(quantity.keys)) if quantity.keys else count, np.nan)
+            quantity.name: np.full(_shape(quantity, len(self.bank.channels)), np.nan)
             for quantity in self._quantities
         }
         for name, meter in self._meters.items():
@@ -121,6 +119,10 @@ class _BankChain:
         if name not in self._reported:
             self._reported.add(name)
             _log.error("%s failed; its quantities are absent until it works again", name, exc_info=error)
+
+
+def _shape(quantity: Quantity, channels: int) -> tuple[int, ...]:
+    return (channels, len(quantity.keys)) if quantity.label else (channels,)
 
 
 def _unknown_fields(count: int) -> dict[str, Precise]:
@@ -154,6 +156,8 @@ class Chain:
         self._tally = tally
         self._tuner = Tuner(stream.rate_hz, stream.center_hz, stream.real, groups)
         learned: dict[str, float] = {}
+        quantities = quantities_of(channels)
+        labels = {quantity.name: quantity.keys for quantity in quantities}
         self._banks = [
             _BankChain(
                 Bank(
@@ -163,7 +167,9 @@ class Chain:
                     branch.noise_hz,
                     stream.fixed_gain,
                     learned,
+                    labels,
                 ),
+                quantities,
                 tally,
             )
             for group, branch in zip(groups, self._tuner.branches, strict=True)

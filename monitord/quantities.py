@@ -1,6 +1,9 @@
 """What a quantity is. Each meter declares its own; the page, the replay output and the tests find them there."""
 
-from dataclasses import dataclass
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, replace
+
+from monitord.settings import Channel
 
 
 @dataclass(frozen=True, slots=True)
@@ -14,6 +17,7 @@ class Quantity:
     flag: the quantity is 0 or 1, and its gauge stands on the page from the first scrape on.
     trusted_only: the gauge is absent while the reading is invalid (modulation and audio).
     label, keys: the second label and its fixed values, for quantities that have one.
+    keys_of: where the settings name those values: what a channel contributes (`resolved` makes `keys` of it).
     """
 
     name: str
@@ -24,3 +28,10 @@ class Quantity:
     trusted_only: bool = False
     label: str = ""
     keys: tuple[str, ...] = ()
+    keys_of: Callable[[Channel], Iterable[str]] | None = None
+
+    def resolved(self, channels: Iterable[Channel]) -> "Quantity":
+        """The quantity with the label values that these channels' settings name, each once, in their order."""
+        if self.keys_of is None:
+            return self
+        return replace(self, keys=tuple(dict.fromkeys(key for one in channels for key in self.keys_of(one))))

@@ -15,7 +15,7 @@ from monitord.acquire import make_source
 from monitord.blocks import Block, Event, Moment, Reading
 from monitord.chain import Chain
 from monitord.errors import ConfigError, MonitordError, RecordingError
-from monitord.measure import QUANTITIES
+from monitord.measure import quantities_of
 from monitord.publish.lines import Csv, JsonLines
 from monitord.publish.table import Table
 from monitord.publish.tally import Tally
@@ -40,13 +40,19 @@ class Writer(Outlet, Protocol):
         ...
 
 
-def writer_for(form: str, out: TextIO) -> Writer:
-    """The writer of a format: json, csv or table."""
+def writer_for(form: str, channels: Sequence[Channel], out: TextIO) -> Writer:
+    """The writer of a format (json, csv or table) for the quantities of these channels."""
+    quantities = quantities_of(channels)
     if form == "json":
-        return JsonLines(QUANTITIES, out)
+        return JsonLines(quantities, out)
     if form == "csv":
-        return Csv(QUANTITIES, out, sys.stderr)
-    return Table(QUANTITIES, out)
+        return Csv(quantities, out, sys.stderr)
+    return Table(quantities, out)
+
+
+def channels_named(settings_path: Path | None, recording: str) -> tuple[Channel, ...]:
+    """The channels that a settings file names; none without one (then each recording's strongest is taken)."""
+    return () if settings_path is None else load(settings_path, recording=recording).channels
 
 
 class Counter:

@@ -14,7 +14,7 @@ from monitord.acquire import make_source
 from monitord.blocks import LOSS_REASONS, Block, Event
 from monitord.chain import Chain
 from monitord.errors import SourceLost
-from monitord.measure import QUANTITIES
+from monitord.measure import quantities_of
 from monitord.notice.source import SourceRule
 from monitord.publish.eventlog import EventLog
 from monitord.publish.metrics import MetricsPage
@@ -65,7 +65,7 @@ class Service:
         self._settings = settings
         self._tally = Tally(lost=dict.fromkeys(LOSS_REASONS, 0))
         names = [channel.name for channel in settings.channels]
-        self._page = MetricsPage(names, QUANTITIES, self._tally, __version__)
+        self._page = MetricsPage(names, quantities_of(settings.channels), self._tally, __version__)
         self._web = WebServer(settings.http.listen, self._page, self.health)
         self._watch = SourceRule()
         self._outlets: tuple[Outlet, ...] = (self._page, EventLog())

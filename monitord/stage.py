@@ -26,6 +26,7 @@ class Bank:
     noise_hz: one-sided noise bandwidth of the baseband.
     fixed_gain: the receiver's gain is fixed, so levels mean something.
     learned_levels: learned reference levels, channel name -> dBFS; outlives resets of the stages.
+    labels: quantity -> values of its second label over all banks, in which order its columns stand.
     """
 
     channels: tuple[Channel, ...]
@@ -34,6 +35,7 @@ class Bank:
     noise_hz: float
     fixed_gain: bool
     learned_levels: dict[str, float]
+    labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
 
     @property
     def hop_s(self) -> float:

@@ -6,6 +6,7 @@ from quadrature over the *mean* carrier, so that bass and over-modulation do not
 """
 
 from collections.abc import Callable
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,6 +17,7 @@ from monitord.detect.averaging import TaperedMean
 from monitord.detect.loop import CarrierLoop
 from monitord.detect.noise import QuadratureNoise, with_floor
 from monitord.detect.search import LineSearch
+from monitord.detect.seconds import Seconds
 from monitord.stage import Bank
 
 _LOCK_BELOW_PRESENT_DB = 3.0  # the loop may hold a carrier somewhat weaker than one that counts as present
@@ -37,6 +39,7 @@ class CarrierRecovery:
     """Recovers the carriers of one bank."""
 
     def __init__(self, bank: Bank) -> None:
+        self._bank = bank
         first = bank.channels[0]
         rate_hz, frames = bank.rate_hz, bank.frames
         self._channels = len(bank.channels)
@@ -61,6 +64,7 @@ class CarrierRecovery:
         count = self._channels
         self._search = LineSearch(count, self._rate_hz, self._frames, STEPS, self._acquire_hz)
         self._mean = TaperedMean(count, self._frames, self._average_hops, STEPS)
+        self._seconds = Seconds(self._bank)
         self._phase = np.zeros(count)
         self._speed = np.zeros(count)  # rad/s
         self._amplitude = np.zeros(count)  # of the last hops, for the loop
@@ -99,9 +103,9 @@ class CarrierRecovery:
         self._last_hop = hop_amplitude
         glimpse = self._seek(baseband.samples)
         scale = (1 / amplitude).astype(np.float32)[:, None]
-        return Detected(
+        detected = Detected(
             in_phase=in_phase(samples, baseband.samples) * scale,
-            quadrature=samples.imag * scale,
+            coherent=samples * scale,
             rate_hz=self._rate_hz,
             span=baseband.span,
             amplitude=amplitude,
@@ -116,6 +120,7 @@ class CarrierRecovery:
             settled=settled,
             broken=broken,
         )
+        return replace(detected, second=self._seconds.take(detected))
 
     def _averaged_steps(self, samples: Complex) -> Steps:
         """The hop turned by the predicted phase and averaged over each step, complex128 (channels, STEPS)."""

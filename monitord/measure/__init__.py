@@ -1,9 +1,12 @@
 """From detected hops to Moments and Readings. A new meter is one file here and one name in `METERS`."""
 
+from collections.abc import Sequence
+
 from monitord.measure.carrier import CarrierMeter
 from monitord.measure.excursions import ExcursionMeter
 from monitord.measure.modulation import ModulationMeter
 from monitord.quantities import Quantity
+from monitord.settings import Channel
 from monitord.stage import Meter
 
 METERS: tuple[type[Meter], ...] = (
@@ -12,4 +15,7 @@ METERS: tuple[type[Meter], ...] = (
     ExcursionMeter,
 )
 
-QUANTITIES: tuple[Quantity, ...] = tuple(quantity for meter in METERS for quantity in meter().quantities)
+
+def quantities_of(channels: Sequence[Channel]) -> tuple[Quantity, ...]:
+    """All quantities of all meters, with the label values that these channels' settings name."""
+    return tuple(quantity.resolved(channels) for meter in METERS for quantity in meter.quantities)

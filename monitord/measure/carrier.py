@@ -88,9 +88,14 @@ class CarrierMeter:
 
 
 def _without_samples(detected: Detected) -> Detected:
-    """The hop without its two large arrays, to be kept for an interval."""
-    nothing = np.empty((len(detected.amplitude), 0), np.float32)
-    return replace(detected, in_phase=nothing, quadrature=nothing)
+    """The hop without its large arrays, to be kept for an interval."""
+    count = len(detected.amplitude)
+    return replace(
+        detected,
+        in_phase=np.empty((count, 0), np.float32),
+        coherent=np.empty((count, 0), np.complex64),
+        second=None,
+    )
 
 
 def _slope_hz(hops: list[Detected], steady: Flags) -> Precise:
