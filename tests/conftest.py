@@ -4,7 +4,11 @@ import subprocess
 import sys
 from collections.abc import Callable
 
+import hypothesis
 import pytest
+
+hypothesis.settings.register_profile("untimed", deadline=None)  # how fast a thing is, is no matter of tests
+hypothesis.settings.load_profile("untimed")
 
 
 @pytest.fixture

@@ -558,13 +558,13 @@ def assert_settings_or_problems(text: str, recording: str | None) -> None:
         assert isinstance(got, Settings)
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=100)
 @given(st.text(), st.sampled_from((None, "x.wav")))
 def test_any_text_gives_settings_or_problems(text: str, recording: str | None) -> None:
     assert_settings_or_problems(text, recording)
 
 
-@settings(max_examples=200, deadline=None)
+@settings(max_examples=200)
 @given(
     st.lists(st.tuples(st.sampled_from(TABLES), st.sampled_from(KEYS), VALUES), max_size=6),
     st.dictionaries(st.sampled_from(TABLES), VALUES, max_size=1),

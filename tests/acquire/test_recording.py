@@ -69,7 +69,7 @@ def test_captures_with_headers_and_a_jump_of_the_global_index_are_a_gap(tmp_path
     assert blocks[3].utc == 1767225602
 
 
-@settings(max_examples=20, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(max_examples=20, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(cuts=st.lists(st.integers(0, 1000), max_size=6))
 def test_any_division_into_captures_gives_the_same_samples(tmp_path: Path, cuts: list[int]) -> None:
     captures = [{"sample_start": cut} for cut in [0, *sorted(cuts)]]

@@ -376,7 +376,7 @@ def pair() -> Iterator[tuple[Sender, SocketSource]]:
     pusher.close()
 
 
-@settings(max_examples=30, deadline=None)
+@settings(max_examples=30)
 @given(cuts=st.lists(st.integers(1, 4999), max_size=12, unique=True))
 def test_any_split_of_the_stream_into_messages_gives_the_same_samples(
     pair: tuple[Sender, SocketSource], cuts: list[int]

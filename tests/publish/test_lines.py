@@ -132,7 +132,7 @@ def test_times_keep_their_milliseconds() -> None:
 
 
 @given(st.floats())
-@settings(max_examples=200, deadline=None)
+@settings(max_examples=200)
 def test_a_rounded_number_is_none_or_as_good_as_the_original(value: float) -> None:
     short = rounded(value)
     if math.isfinite(value):
