@@ -71,7 +71,7 @@ class _BankChain:
     def __init__(self, bank: Bank, quantities: Sequence[Quantity], tally: Tally) -> None:
         self.bank = bank
         self._quantities = quantities
-        self.judge = FaultJudge(bank)
+        self._judge = FaultJudge(bank)
         self._tally = tally
         self._detector = DETECTORS[bank.channels[0].detector]()
         self._detector.prepare(bank)
@@ -91,15 +91,19 @@ class _BankChain:
     def detect(self, baseband: Baseband) -> Detected:
         return self._detector.process(baseband)
 
-    def measure(self, detected: Detected) -> dict[str, Precise]:
-        """This hop's fields of Moment."""
+    def measure(self, detected: Detected) -> tuple[dict[str, Precise], NDArray[np.uint32]]:
+        """This hop's fields of Moment, and the faults that stand against it: the judge's and the meters'."""
         fields = dict(self._unknown)
+        faults = self._judge.faults(detected)
         for name, meter in self._meters.items():
             try:
-                fields |= meter.process(detected)
+                found = meter.process(detected)
+                fields |= {name: value for name, value in found.items() if name != "faults"}
+                faults |= found.get("faults", faults).astype(np.uint32)
             except Exception as error:  # whatever a meter does wrong must not cost the daemon
                 self._failed(name, error)
-        return fields
+        faults[(fields["present"] == 0) & detected.locked] |= np.uint32(Fault.WEAK_SIGNAL)
+        return fields, faults
 
     def reading(self) -> dict[str, Precise]:
         """All quantities of the interval; NaN those of a meter that failed."""
@@ -267,12 +271,10 @@ class Chain:
             bank.reset()
 
     def _moment(self, span: Span, detected: Sequence[Detected]) -> Moment:
-        parts = [bank.measure(hop) for bank, hop in zip(self._banks, detected, strict=True)]
+        measured = [bank.measure(hop) for bank, hop in zip(self._banks, detected, strict=True)]
+        parts, faults = zip(*measured, strict=True)
         fields = {name: self._merged([part[name] for part in parts]) for name in parts[0]}
         present, cut_off = fields.pop("present"), fields.pop("cut_off")
-        faults = [bank.judge.faults(hop) for bank, hop in zip(self._banks, detected, strict=True)]
-        for part, bits, hop in zip(parts, faults, detected, strict=True):
-            bits[(part["present"] == 0) & hop.locked] |= np.uint32(Fault.WEAK_SIGNAL)
         return Moment(
             channels=self.names,
             span=span,

@@ -112,7 +112,10 @@ class Meter(Protocol):
         ...
 
     def process(self, detected: Detected) -> Mapping[str, Precise]:
-        """Take one hop; return the fields of Moment that this meter knows (perhaps none)."""
+        """Take one hop; return the fields of Moment that this meter knows (perhaps none).
+
+        Among them may be "faults": bits of Fault (channels,), as numbers; those of all meters are joined.
+        """
         ...
 
     def reading(self) -> Mapping[str, Precise]:
