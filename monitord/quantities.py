@@ -5,6 +5,9 @@ from dataclasses import dataclass, replace
 
 from monitord.settings import Channel
 
+COVERAGE = 1.96
+"""Coverage factor of all uncertainties: 95 % of a normal distribution (JCGM 100, G.2.3)."""
+
 
 @dataclass(frozen=True, slots=True)
 class Quantity:

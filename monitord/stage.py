@@ -18,6 +18,17 @@ class SourceCounts:
 
 
 @dataclass(frozen=True, slots=True)
+class Accuracy:
+    """How well the receiver is known: half-widths that hold the truth in 95 %, 0 where nothing is stated.
+
+    level_db: of its levels; frequency_hz: of its frequencies at each channel's carrier, Hz, in the order of the rows.
+    """
+
+    level_db: float = 0.0
+    frequency_hz: tuple[float, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
 class Bank:
     """Channels that are computed together, one row each: what a detector or meter is prepared for.
 
@@ -26,6 +37,7 @@ class Bank:
     noise_hz: one-sided noise bandwidth of the baseband.
     fixed_gain: the receiver's gain is fixed, so levels mean something.
     learned_levels: learned reference levels, channel name -> dBFS; outlives resets of the stages.
+    accuracy: of the receiver, as the settings state it.
     labels: quantity -> values of its second label over all banks, in which order its columns stand.
     """
 
@@ -35,6 +47,7 @@ class Bank:
     noise_hz: float
     fixed_gain: bool
     learned_levels: dict[str, float]
+    accuracy: Accuracy = Accuracy()
     labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
 
     @property

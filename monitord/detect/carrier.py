@@ -28,7 +28,7 @@ _NOISE_SMOOTHING = 0.2
 _MOST_ANGLE = 1.0
 _COHERENT = 0.08  # bass of 120 % leaves 0.58, noise alone 1/24
 _OUTDONE, _DOUBT_HOPS = 0.35, 10  # a stronger line nearby for a second: search again
-_SETTLED_HOPS = 5  # the carrier's mean is exact from half a second on
+SETTLED_HOPS = 5  # the carrier's mean is exact from half a second on
 _LEAST_AMPLITUDE = 1e-12  # -240 dBFS: keeps the divisions by an amplitude defined where there is none
 
 Steps = NDArray[np.complex128]
@@ -94,7 +94,7 @@ class CarrierRecovery:
         self._average(samples, broken)
         self._advance(path[:, -1], speed_change, line)
         locked = self._tracking & (self._good >= _CONFIRMED_AFTER)
-        settled = locked & (self._mean.heard >= min(_SETTLED_HOPS, self._average_hops))
+        settled = locked & (self._mean.heard >= min(SETTLED_HOPS, self._average_hops))
         amplitude = np.where(locked, self._mean.mean, np.nan)
         spread = np.maximum(np.maximum(noise, disturbance), self._smooth_noise)
         sigma = np.sqrt(spread * self._noise_hz) / amplitude

@@ -1,16 +1,20 @@
 """The carrier: present, level, change of level, frequency offset, C/N0, locked."""
 
+import math
 from collections.abc import Mapping
 from dataclasses import replace
 
 import numpy as np
 
 from monitord.blocks import Detected, Flags, Precise
+from monitord.detect.carrier import SETTLED_HOPS
 from monitord.measure.presence import Presence
-from monitord.quantities import Quantity
+from monitord.quantities import COVERAGE, Quantity
 from monitord.stage import Bank
 
 MOST_C_N0_DBHZ = 160.0  # what single precision can tell
+_DB_PER_NEPER = 20 / math.log(10)
+_OWN_ERROR_DB = 0.00006  # of filter, mean and arithmetic, without noise
 
 
 class CarrierMeter:
@@ -30,6 +34,18 @@ class CarrierMeter:
             "Hz",
             "Carrier frequency, measured less nominal.",
             "Rife and Boorstyn 1974",
+        ),
+        Quantity(
+            "carrier_level_uncertainty_db",
+            "dB",
+            "Expanded uncertainty (95 %) of the carrier level.",
+            "JCGM 100",
+        ),
+        Quantity(
+            "carrier_frequency_uncertainty_hertz",
+            "Hz",
+            "Expanded uncertainty (95 %) of the frequency offset; of noise alone where no clock accuracy is stated.",
+            "JCGM 100",
         ),
         Quantity(
             "carrier_to_noise_density_dbhz",
@@ -72,12 +88,20 @@ class CarrierMeter:
         steady = np.all([hop.locked & ~hop.broken for hop in hops], axis=0) & (state == 1)
         if not self._bank.fixed_gain:
             level = np.full(level.shape, np.nan)
+        offset_hz, scatter_hz = _slope_hz(hops, steady)
+        accuracy = self._bank.accuracy
         return {
             "carrier_present": np.where(state < 0, np.nan, state),
             "carrier_loop_locked": locked.astype(np.float64),
             "carrier_level_dbfs": level,
             "carrier_level_change_db": level - self._presence.reference.level_dbfs,
-            "carrier_frequency_offset_hertz": _slope_hz(hops, steady),
+            "carrier_level_uncertainty_db": np.where(
+                np.isfinite(level), self._level_uncertainty_db(hops), np.nan
+            ),
+            "carrier_frequency_offset_hertz": offset_hz,
+            "carrier_frequency_uncertainty_hertz": np.hypot(
+                COVERAGE * scatter_hz, accuracy.frequency_hz or 0.0
+            ),
             "carrier_to_noise_density_dbhz": _c_n0_db(hops, steady),
         }
 
@@ -85,6 +109,17 @@ class CarrierMeter:
         """Mean power of the amplitude averages that make up the interval, from its end backwards."""
         averages = [np.square(hop.amplitude) for hop in hops[:: -self._average_hops]]
         return np.asarray(10 * np.log10(np.mean(averages, axis=0)))
+
+    def _level_uncertainty_db(self, hops: list[Detected]) -> Precise:
+        """Of the noise that a Hann window of T seconds passes (1.5 / T Hz, half of it in phase), and the receiver's."""
+        heard_s = (np.sum([hop.settled for hop in hops], axis=0) + SETTLED_HOPS - 1) * self._bank.hop_s
+        average_s = self._average_hops * self._bank.hop_s
+        whole = np.where(heard_s < average_s, heard_s, average_s * max(1, len(hops) // self._average_hops))
+        power = np.mean([np.square(hop.hop_amplitude) for hop in hops], axis=0)
+        noise = np.mean([hop.noise_density for hop in hops], axis=0) / np.maximum(power, 1e-30)
+        relative = np.sqrt(0.75 * noise / np.maximum(whole, self._bank.hop_s))
+        known = math.hypot(self._bank.accuracy.level_db, _OWN_ERROR_DB)
+        return np.asarray(np.hypot(COVERAGE * _DB_PER_NEPER * relative, known), np.float64)
 
 
 def _without_samples(detected: Detected) -> Detected:
@@ -98,14 +133,22 @@ def _without_samples(detected: Detected) -> Detected:
     )
 
 
-def _slope_hz(hops: list[Detected], steady: Flags) -> Precise:
-    """Least-squares slope of the phase over the interval, Hz; NaN where the carrier was not steady."""
+def _slope_hz(hops: list[Detected], steady: Flags) -> tuple[Precise, Precise]:
+    """Least-squares slope of the phase over the interval and its standard deviation, Hz; NaN where not steady.
+
+    The deviation comes from the phases' own scatter about the line, so whatever disturbs them is in it.
+    """
     phase = np.concatenate([hop.phase for hop in hops], axis=1)
     span = hops[-1].span
     step_s = (span.end - span.start) / span.rate_hz / hops[-1].phase.shape[1]
     time_s = (np.arange(phase.shape[1]) - (phase.shape[1] - 1) / 2) * step_s
-    slope = (phase - phase[:, :1]) @ time_s / np.sum(np.square(time_s))
-    return np.where(steady, slope / (2 * np.pi), np.nan)
+    phase = phase - phase[:, :1]
+    whole = np.sum(np.square(time_s))
+    slope = phase @ time_s / whole
+    rest = phase - phase.mean(axis=1, keepdims=True) - slope[:, None] * time_s
+    deviation = np.sqrt(np.square(rest).sum(axis=1) / ((len(time_s) - 2) * whole))
+    known = np.where(steady, 1 / (2 * np.pi), np.nan)
+    return slope * known, deviation * known
 
 
 def _c_n0_db(hops: list[Detected], steady: Flags) -> Precise:

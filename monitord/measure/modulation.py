@@ -5,10 +5,10 @@ from collections.abc import Mapping
 import numpy as np
 
 from monitord.blocks import Detected, Flags, Precise, Real
-from monitord.measure.noiselift import NEAR_TOP_SIGMA, corrected_largest, lift
+from monitord.measure.noiselift import LEAST_NEAR, NEAR_SIGMA, Top, largest, lift, spread
 from monitord.measure.truepeak import TruePeaks
 from monitord.measure.validity import peaks_mean_something
-from monitord.quantities import Quantity
+from monitord.quantities import COVERAGE, Quantity
 from monitord.stage import Bank
 
 WINDOW_S = 10.0
@@ -16,6 +16,7 @@ RECURRING_WINDOW_S = 60.0
 RECURRING_RANK = 10  # common practice: how many make "frequently recurring"
 _RECURRING_SHARE = 0.9
 _MOVING = 0.03  # of the carrier against its mean: peaks wait for the mean around them
+_OWN_ERROR = 0.001  # of filter, interpolation and mean together, without noise: 95 % of tones and programme
 _LEAPT = 0.1  # and against that: no peak is told
 
 
@@ -52,6 +53,13 @@ class ModulationMeter:
             trusted_only=True,
         ),
         Quantity(
+            "modulation_peak_uncertainty_ratio",
+            "",
+            "Expanded uncertainty (95 %) of the positive and negative peak.",
+            "JCGM 100",
+            trusted_only=True,
+        ),
+        Quantity(
             "modulation_rms_ratio",
             "",
             "Rms of the modulation over the interval, reception noise subtracted.",
@@ -66,6 +74,7 @@ class ModulationMeter:
         self._window = round(WINDOW_S / bank.hop_s)
         self._slots = round(RECURRING_WINDOW_S / bank.hop_s)
         self._independent = 2 * bank.noise_hz / bank.rate_hz  # of the samples of a hop
+        self._average_s = bank.channels[0].carrier_average_s
         self._average_hops = max(1, round(bank.channels[0].carrier_average_s / bank.hop_s))
         self.reset()
 
@@ -75,11 +84,15 @@ class ModulationMeter:
         self._true = TruePeaks(count, self._bank.frames)
         self._peaks = np.full((self._slots, 2, count), np.nan)  # a ring: `_place` holds the newest
         self._raw = np.full((self._slots, 2, count), np.nan)  # the same peaks, in-phase, full scale = 1
-        self._count = np.ones((self._slots, 2, count))  # independent samples near each peak
+        self._near = np.ones(
+            (self._slots, 2, 2, count)
+        )  # independent samples within 1 and 3 sigma of each peak
+        self._equal = np.zeros((2, count))  # the tops are those of a steady tone, as the last window had it
         self._later = np.full((self._slots, 2, count), np.nan)  # mean square and mean that wait for `_center`
         self._level = np.full((self._slots, count), np.nan)  # the carrier's amplitude as it was taken
         self._recent = np.full((self._slots, count), np.nan)  # the carrier's amplitude about then
         self._sigma = np.full((self._slots, count), np.nan)  # of the reception noise
+        self._power = np.full((self._slots, count), np.nan)  # mean square of the modulation, noise subtracted
         self._place = 0
         self._amplitude = np.full(count, np.nan)  # of the hop before
         self._valid_hops = np.zeros(count, np.int64)
@@ -100,28 +113,35 @@ class ModulationMeter:
         peaks = np.where(usable & peaks_mean_something(detected, self._bank), [highest, -lowest], np.nan)
         noise_power = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         sigma = np.sqrt(noise_power)
-        count = self._near_top(wave, highest, lowest, sigma)
+        near = self._near_top(wave, highest, lowest, sigma)
         moving = np.abs(detected.recent_amplitude / detected.amplitude - 1) > _MOVING
         moving &= self._average_hops > 1
-        self._remember(np.where(moving, np.nan, peaks), count, sigma, detected)
-        self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
+        self._remember(np.where(moving, np.nan, peaks), near, sigma, detected)
         square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - noise_power
+        self._power[self._place] = np.where(usable, square, np.nan)
+        self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
         self._add_square(square, usable & ~moving)
         self._later[self._place] = np.where(usable & moving, [square, wave.mean(axis=1)], np.nan)
         self._heard |= usable
         self._center(detected.amplitude)
         self._true.advance()
-        peaks = peaks - lift(count) * sigma
+        peaks = peaks - lift(near, self._equal) * sigma
         return {"positive_peak": peaks[0], "negative_peak": peaks[1]}
 
     def _near_top(self, wave: Real, highest: Precise, lowest: Precise, sigma: Precise) -> Precise:
-        """How many independent samples stand within 3 sigma of the highest and of the lowest, (2, channels)."""
-        reach = NEAR_TOP_SIGMA * sigma
-        above = (wave > (highest - reach).astype(np.float32)[:, None]).sum(axis=1)
-        below = (wave < (lowest + reach).astype(np.float32)[:, None]).sum(axis=1)
-        return np.maximum(np.array([above, below]) * self._independent, 1.0)
+        """How many independent samples stand near the highest and the lowest, (1 and 3 sigma, 2, channels)."""
+        near = np.empty((2, 2, len(wave)))
+        for level, (reach, least) in enumerate(zip(NEAR_SIGMA, LEAST_NEAR, strict=True)):
+            top, bottom = (
+                (highest - reach * sigma).astype(np.float32),
+                (lowest + reach * sigma).astype(np.float32),
+            )
+            near[level, 0] = np.count_nonzero(wave > top[:, None], axis=1)
+            near[level, 1] = np.count_nonzero(wave < bottom[:, None], axis=1)
+            near[level] = np.maximum(near[level] * self._independent, least)
+        return near
 
-    def _remember(self, peaks: Precise, count: Precise, sigma: Precise, detected: Detected) -> None:
+    def _remember(self, peaks: Precise, near: Precise, sigma: Precise, detected: Detected) -> None:
         # A cut is known for sure only in the hop after the one in which it began.
         self._peaks[self._place, :, detected.broken] = np.nan
         self._raw[self._place, :, detected.broken] = np.nan
@@ -130,7 +150,7 @@ class ModulationMeter:
         self._peaks[self._place] = peaks
         self._level[self._place] = detected.amplitude
         self._recent[self._place] = detected.recent_amplitude
-        self._count[self._place] = count
+        self._near[self._place] = near
         self._sigma[self._place] = sigma
 
     def _add_square(self, square: Precise, use: Flags) -> None:
@@ -164,19 +184,34 @@ class ModulationMeter:
         """See stage.Meter."""
         heard = self._heard  # nothing of the past stands for an interval without a valid hop
         window = (self._place - np.arange(self._window)) % self._slots
-        largest = corrected_largest(self._peaks[window], self._count[window], self._sigma[self._place])
-        positive, negative = np.where(heard, largest, np.nan)
+        sigma = self._sigma[self._place]
+        rms = np.sqrt(np.maximum(_mean_known(self._power[window]), 0))
+        top = largest(self._peaks[window], self._near[window], sigma, rms)
+        self._equal = top.equal
+        peaks = np.where(heard, top.peak - lift(top.near, top.equal) * sigma, np.nan)
         recurring = self._recurring(heard)
         known = heard & (self._square_hops > 0)
         mean = np.divide(self._square, self._square_hops, out=np.full(heard.shape, np.nan), where=known)
         self._begin()
         return {
-            "modulation_positive_peak_ratio": positive,
-            "modulation_negative_peak_ratio": negative,
+            "modulation_positive_peak_ratio": peaks[0],
+            "modulation_negative_peak_ratio": peaks[1],
+            "modulation_peak_uncertainty_ratio": self._uncertainty(peaks, top, sigma),
             "modulation_recurring_positive_peak_ratio": recurring[0],
             "modulation_recurring_negative_peak_ratio": recurring[1],
             "modulation_rms_ratio": np.sqrt(np.maximum(mean, 0)),
         }
+
+    def _uncertainty(self, peaks: Precise, top: Top, sigma: Precise) -> Precise:
+        """Expanded uncertainty of the worse of the two peaks, (channels,).
+
+        Noise on the peak, noise of the carrier's mean that it refers to (a Hann window of T seconds passes 1.5 / T Hz
+        of it), and what interpolation, filter and mean err by without noise, joined as independent (JCGM 100, 5.1.2).
+        """
+        noise = spread(top.near, top.equal) * sigma
+        carrier = (1 + np.abs(peaks)) * sigma * np.sqrt(0.75 / (self._average_s * self._bank.noise_hz))
+        worst = np.sqrt(np.square(noise) + np.square(carrier)).max(axis=0)
+        return np.asarray(np.hypot(COVERAGE * worst, _OWN_ERROR))
 
     def _recurring(self, heard: Flags) -> Precise:
         """The 10th largest slot of the window, (2, channels); NaN until the window's time has been valid."""
@@ -184,7 +219,15 @@ class ModulationMeter:
         ready = heard & enough & (self._valid_hops >= self._slots)
         if not ready.any():
             return np.full(self._peaks.shape[1:], np.nan)
-        peaks = self._peaks - lift(self._count) * self._sigma[:, None]
+        peaks = self._peaks - lift(self._near.swapaxes(0, 1), self._equal) * self._sigma[:, None]
         slots = np.where(np.isfinite(peaks), peaks, -np.inf)
         ranked = np.partition(slots, -RECURRING_RANK, axis=0)[-RECURRING_RANK]
         return np.where(ready, ranked, np.nan)
+
+
+def _mean_known(values: Precise) -> Precise:
+    """Mean over the first axis of what is not NaN; NaN where all is."""
+    known = np.isfinite(values)
+    count = known.sum(axis=0)
+    mean = np.where(known, values, 0).sum(axis=0) / np.maximum(count, 1)
+    return np.where(count > 0, mean, np.nan)

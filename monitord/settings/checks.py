@@ -10,7 +10,12 @@ from monitord.settings.problems import Part, shown
 
 MOST_CHANNELS = 2000
 
-OF_EVERY_KIND = frozenset({"kind", "sample_rate_hz", "center_hz", "gain", "remove_dc"})
+OF_EVERY_KIND = frozenset(
+    {
+        *("kind", "sample_rate_hz", "center_hz", "gain", "remove_dc"),
+        *("level_accuracy_db", "clock_accuracy_ratio", "oscillator_accuracy_ratio", "shared_clock"),
+    }
+)
 _OF_KIND = {
     "socket": frozenset({"endpoint", "pattern", "attach", "framing", "topic", "datatype"}),
     "soundcard": frozenset({"device", "wiring"}),
@@ -98,6 +103,11 @@ def source_problems(part: Part[Source]) -> Iterator[str]:
         address = host_port(source.endpoint.removeprefix("tcp://"))
         if address is not None and (address[0] == "*" or address[1] == 0):
             yield part.problem("endpoint", 'must name a host and a port (not 0) with attach = "connect"')
+    if source.shared_clock and source.oscillator_accuracy_ratio:
+        yield part.problem(
+            "oscillator_accuracy_ratio",
+            "must be left out with shared_clock = true: clock_accuracy_ratio holds for both",
+        )
     if source.real and source.center_hz:
         yield part.problem("center_hz", "must be 0 or left out for a real IF (carrier_hz is then the IF)")
 

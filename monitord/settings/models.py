@@ -186,6 +186,9 @@ class Source(_Section):
     center_hz: what 0 Hz of the stream stands for; None only for a recording (it says it itself, or it is 0).
         Described messages say it too where it is not set.
     gain: the receiver's gain is "fixed" or "automatic".
+    level_accuracy_db, clock_accuracy_ratio, oscillator_accuracy_ratio: within which (95 %) levels, the sample clock and
+        the receiver's oscillator are known to be right; 0: not stated, and the uncertainties are those of noise alone.
+    shared_clock: sample clock and oscillator come from one reference, so that `clock_accuracy_ratio` holds for both.
     remove_dc: take the mean away before anything else (not available yet: always False).
     endpoint, pattern, attach, framing, topic: of the ZMQ socket; topic None: none.
     datatype: SigMF name of the sample format; None where the stream or recording says it.
@@ -200,6 +203,10 @@ class Source(_Section):
     )
     center_hz: float | None = Field(default=None, validate_default=True)
     gain: Literal["fixed", "automatic"] = "fixed"
+    level_accuracy_db: Annotated[float, _within(0, 20, "dB")] = 0.0
+    clock_accuracy_ratio: Annotated[float, _within(0, 0.01)] = 0.0
+    oscillator_accuracy_ratio: Annotated[float, _within(0, 0.01)] = 0.0
+    shared_clock: bool = False
     remove_dc: Annotated[bool, AfterValidator(_not_yet)] = False
     endpoint: Annotated[str, AfterValidator(_endpoint)] | None = None
     pattern: Literal["sub", "pull"] = "sub"

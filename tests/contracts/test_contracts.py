@@ -4,7 +4,7 @@ Any split of the source stream is the whole; a gap too. One channel is the same 
 The input is left as it was (all arrays here are read-only).
 """
 
-from dataclasses import fields
+from dataclasses import fields, replace
 
 import numpy as np
 import pytest
@@ -24,19 +24,29 @@ ARRAYS = [field.name for field in fields(Detected) if field.name not in ("rate_h
 
 
 def through(size: int, gap: tuple[int, int] | None, samples: np.ndarray) -> Kept:
-    kept = Kept()
+    outlet = Kept()
     rules = [make() for make in RULES]
-    chain = Chain(CHANNELS, Stream(RATE_HZ, 0.0, False, True), rules, [kept], kept.tally, 0.5)
+    chain = Chain(CHANNELS, Stream(RATE_HZ, 0.0, False, True), rules, [outlet], outlet.tally, 0.5)
     for block in blocks(samples, size, gap):
         chain.process(block)
     chain.finish()
-    return kept
+    return outlet
 
 
 def detected_by(name: str, rows: slice = slice(None)) -> list[Detected]:
     detector = DETECTORS[name]()
     detector.prepare(bank(CHANNELS[rows]))
-    return [detector.process(hop) for hop in hops(stream(), CHANNELS[rows])]
+    return [kept(detector.process(hop)) for hop in hops(stream(), CHANNELS[rows])]
+
+
+def kept(detected: Detected) -> Detected:
+    """The hop for good: the arrays of a second are good until the next hop only."""
+    second = detected.second
+    if second is None:
+        return detected
+    in_phase, coherent = second.in_phase.copy(), second.coherent.copy()
+    in_phase.flags.writeable = coherent.flags.writeable = False
+    return replace(detected, second=replace(second, in_phase=in_phase, coherent=coherent))
 
 
 def same(one: object, other: object, **tolerance: float) -> None:
