@@ -178,6 +178,8 @@ class Detected:
         quadrature shows it, carrier = 1 (channels,).
     phase: carrier phase less that of the nominal carrier, rad, unwrapped while locked, float64
         (channels, steps), at the middle of `steps` equal parts of the hop.
+    step_amplitude: magnitude of the mean over each of these steps, near the phase followed or last followed, full
+        scale = 1, locked or not: what stands at the carrier, at the time resolution of keying (channels, steps).
     offset_hz: carrier frequency less the nominal one, as the loop holds it (channels,).
     glimpse: amplitude of a line within reach that this hop shows while none is followed safely, else 0 (channels,).
     locked: the carrier loop holds a carrier (channels,).
@@ -196,6 +198,7 @@ class Detected:
     noise_density: Precise
     sigma: Precise
     phase: Precise
+    step_amplitude: Precise
     offset_hz: Precise
     glimpse: Precise
     locked: Flags

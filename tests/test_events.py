@@ -97,7 +97,7 @@ def test_a_cut_carrier_is_one_loss_within_a_second_and_nothing_else(c_n0_dbhz: f
             assert not reading.valid[0]
             values = {name: value[0] for name, value in reading.values.items()}
             assert values.pop("carrier_present") == values.pop("carrier_loop_locked") == 0
-            assert np.isnan(list(values.values())).all()
+            assert all(np.isnan(value).all() for value in values.values())
 
 
 @pytest.mark.parametrize("low", [0.0, 0.1, 0.15])

@@ -114,6 +114,7 @@ class CarrierRecovery:
             noise_density=noise,
             sigma=sigma,
             phase=phase + steps.imag / np.maximum(self._amplitude, _LEAST_AMPLITUDE)[:, None],
+            step_amplitude=np.abs(steps),
             offset_hz=np.where(locked, self._speed / (2 * np.pi), np.nan),
             glimpse=glimpse,
             locked=locked,

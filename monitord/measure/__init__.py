@@ -4,7 +4,9 @@ from collections.abc import Sequence
 
 from monitord.measure.carrier import CarrierMeter
 from monitord.measure.excursions import ExcursionMeter
+from monitord.measure.ident import IdentMeter
 from monitord.measure.modulation import ModulationMeter
+from monitord.measure.tonedepth import ToneDepthMeter
 from monitord.quantities import Quantity
 from monitord.settings import Channel
 from monitord.stage import Meter
@@ -13,6 +15,8 @@ METERS: tuple[type[Meter], ...] = (
     CarrierMeter,
     ModulationMeter,
     ExcursionMeter,
+    ToneDepthMeter,
+    IdentMeter,
 )
 
 

@@ -27,12 +27,14 @@ from monitord.settings.models import (
     MIN_RATE_HZ,
     Channel,
     Http,
+    Ident,
     Journal,
     Limits,
     Raster,
     Settings,
     Source,
     Station,
+    Tone,
 )
 from monitord.settings.problems import Model, Part, one_line, shown, take, unknown_key
 
@@ -40,11 +42,13 @@ __all__ = [
     "DETECTORS",
     "Channel",
     "Http",
+    "Ident",
     "Journal",
     "Limits",
     "Settings",
     "Source",
     "Station",
+    "Tone",
     "built_in",
     "built_in_channels",
     "check_span",

@@ -5,10 +5,20 @@ from collections import Counter
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
-from monitord.settings.models import MIN_BANDWIDTH_HZ, NAME, NAME_RULE, Channel, Raster, Source, host_port
+from monitord.settings.models import (
+    MIN_BANDWIDTH_HZ,
+    NAME,
+    NAME_RULE,
+    Channel,
+    Raster,
+    Source,
+    Tone,
+    host_port,
+)
 from monitord.settings.problems import Part, shown
 
 MOST_CHANNELS = 2000
+TONES_APART_HZ = 10.0  # each tone needs seven lines of the spectrum of a second for itself
 
 OF_EVERY_KIND = frozenset(
     {
@@ -141,6 +151,8 @@ def channel_problems(parts: Sequence[Part[Channel]], span: Range | None) -> Iter
         if part.sound("name") and first.setdefault(name, part.where) != part.where:
             yield part.problem("name", f"is the name of {first[name]} too; must be a name of its own")
         yield from _emission_problems(part)
+        yield from _tone_problems(part)
+        yield from _ident_problems(part)
         if span is not None and part.sound("carrier_hz", "bandwidth_hz", "acquire_hz"):
             trouble = span.trouble(part.model)
             if trouble is not None:
@@ -156,10 +168,41 @@ def _emission_problems(part: Part[Channel] | Part[Raster]) -> Iterator[str]:
         )
 
 
+def _tone_problems(part: Part[Channel] | Part[Raster]) -> Iterator[str]:
+    """Tones outside the channel's audio band, too near to each other, or keyed with a band."""
+    model = part.model
+    for index, tone in enumerate(model.tone):
+        place = f"{part.where}.tone[{index}]"
+        if part.sound("bandwidth_hz") and tone.hz + (tone.band_hz or 0) / 2 > model.bandwidth_hz:
+            what = "must lie within" if tone.band_hz is None else "must lie, with its band_hz, within"
+            yield f"{place}.hz = {shown(tone.hz)}: {what} bandwidth_hz: {shown(model.bandwidth_hz)} Hz"
+        if tone.keyed and tone.band_hz is not None:
+            yield f"{place}.band_hz = {shown(tone.band_hz)}: must be left out of a tone with keyed = true"
+        yield from _neighbour_problems(place, tone, model.tone[:index])
+
+
+def _ident_problems(part: Part[Channel] | Part[Raster]) -> Iterator[str]:
+    ident, bandwidth_hz = part.model.ident, part.model.bandwidth_hz
+    if ident is None or ident.on == "carrier" or not part.sound("bandwidth_hz"):
+        return
+    if ident.tone_hz > bandwidth_hz:
+        text = f"must lie within bandwidth_hz: {shown(bandwidth_hz)} Hz"
+        yield f"{part.where}.ident.tone_hz = {shown(ident.tone_hz)}: {text}"
+
+
+def _neighbour_problems(place: str, tone: Tone, others: Sequence[Tone]) -> Iterator[str]:
+    near = next((other for other in others if abs(other.hz - tone.hz) < TONES_APART_HZ), None)
+    if near is not None:
+        text = f"must be at least {shown(TONES_APART_HZ)} Hz from the other tones ({shown(near.hz)} Hz)"
+        yield f"{place}.hz = {shown(tone.hz)}: {text}"
+
+
 def raster_carriers(part: Part[Raster], problems: list[str]) -> list[float]:
     """Carriers of one raster in Hz, ascending; none where its frequencies are wrong."""
     raster = part.model
     problems.extend(_emission_problems(part))
+    problems.extend(_tone_problems(part))
+    problems.extend(_ident_problems(part))
     found = list(_step_problems(part))
     problems.extend(found)
     if found or not part.sound("first_hz", "last_hz", "step_hz"):

@@ -42,6 +42,9 @@ MIN_RATE_HZ, MAX_RATE_HZ = 1_000.0, 50e6
 MIN_BANDWIDTH_HZ = 100.0
 DEFAULT_BANDWIDTH_HZ = 5_000.0
 
+MOST_TONES = 16
+_IDENT_TEXT = re.compile(r"[A-Z0-9]{1,16}")
+
 _HOST = r"\*|[A-Za-z0-9][A-Za-z0-9._-]*|\[[0-9A-Fa-f:.]+(?:%[A-Za-z0-9._-]+)?\]"
 _HOST_PORT = re.compile(rf"(?P<host>{_HOST}):(?P<port>[0-9]{{1,5}})")
 
@@ -166,6 +169,12 @@ def _device(value: object) -> object:
     raise ValueError("must be the name of a sound input, a part of it, or its index")
 
 
+def _ident_text(value: str) -> str:
+    if _IDENT_TEXT.fullmatch(value) is None:
+        raise ValueError("must be 1 to 16 capital letters and digits")
+    return value
+
+
 Text = Annotated[str, AfterValidator(_not_empty)]
 
 
@@ -247,6 +256,53 @@ class Limits(_Section):
     hold_s: Annotated[float, _within(0, 60, "s")] = 0.2
 
 
+class Tone(_Section):
+    """A tone whose depth is measured.
+
+    hz: nominal frequency.
+    band_hz: of a subcarrier with frequency modulation: the width of the band, `hz` in its middle, that holds it;
+        its depth is sqrt(2) times the rms in there. None: a plain tone.
+    keyed: the tone comes and goes (an ident); its depth is that while it is on.
+    """
+
+    hz: Annotated[float, _at_least(10, "Hz")] = Field(description="must be the tone's frequency in Hz")
+    band_hz: Annotated[float, _at_least(10, "Hz")] | None = None
+    keyed: bool = False
+
+    @property
+    def plain(self) -> bool:
+        """Neither keyed nor a subcarrier."""
+        return self.band_hz is None and not self.keyed
+
+    @property
+    def label(self) -> str:
+        """The tone's value of the label `tone_hertz`."""
+        return f"{self.hz:g}"
+
+
+class Ident(_Section):
+    """The ident in Morse code that is to be heard.
+
+    expected: its letters and digits.
+    period_s: it comes at least once in this time.
+    on: what is keyed, a "tone" or the "carrier" itself.
+    tone_hz: nominal frequency of the tone.
+    """
+
+    expected: Annotated[str, AfterValidator(_ident_text)] = Field(
+        description="must be the letters and digits of the ident"
+    )
+    period_s: Annotated[float, _within(1, 3600, "s")] = 30.0
+    on: Literal["tone", "carrier"] = "tone"
+    tone_hz: Annotated[float, _at_least(100, "Hz")] = 1020.0
+
+
+def _tones(value: tuple[Tone, ...]) -> tuple[Tone, ...]:
+    if len(value) > MOST_TONES:
+        raise ValueError(f"must be at most {MOST_TONES} tables [[channel.tone]]")
+    return value
+
+
 class ChannelKeys(_Section):
     """What a channel and a raster of channels share. Frequencies in Hz, times in s, levels in dBFS.
 
@@ -258,6 +314,8 @@ class ChannelKeys(_Section):
     reference_level_dbfs: the usual level of the carrier; None: learned.
     present_c_n0_dbhz, loss_drop_db, loss_after_s: what counts as a carrier, and as its loss.
     expect: a "carrier" is expected here, "none", or "any" (neither alarms).
+    tone: the tones whose depth is measured.
+    ident: the ident that is to be heard; None: none is.
     """
 
     bandwidth_hz: Annotated[float, _at_least(MIN_BANDWIDTH_HZ, "Hz")] = DEFAULT_BANDWIDTH_HZ
@@ -274,6 +332,8 @@ class ChannelKeys(_Section):
     loss_after_s: Annotated[float, _within(0, 3600, "s")] = 0.5
     expect: Literal["carrier", "none", "any"] = "carrier"
     limits: Limits = Limits()
+    tone: Annotated[tuple[Tone, ...], Field(strict=False), AfterValidator(_tones)] = ()
+    ident: Ident | None = None
 
     @field_validator("emission_bandwidth_hz", mode="before")
     @classmethod

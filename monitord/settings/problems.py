@@ -5,7 +5,7 @@ import json
 import re
 from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any, Generic, TypeVar
+from typing import Any, Generic, TypeVar, get_args
 
 from pydantic import BaseModel, ValidationError
 from pydantic_core import ErrorDetails
@@ -24,6 +24,7 @@ _EXPECTED = {
     "string_unicode": "must be valid Unicode text",
     "bool_type": "must be true or false",
     "model_type": "must be a table",
+    "tuple_type": "must be an array of tables",
 }
 
 # What takes the place of a required value that is wrong, so that the rest can be checked all the same.
@@ -104,21 +105,32 @@ def take(model: type[Model], raw: object, where: str, problems: list[str]) -> Pa
 
 
 def _line(model: type[BaseModel], where: str, error: ErrorDetails) -> str:
-    *path, key = (str(step) for step in error["loc"])
-    table = _table_at(model, path)
-    prefix = "".join(f"{step}." for step in (where, *path))
+    *path, key = error["loc"]
+    fields = _table_at(model, path).model_fields
+    place = _place(where, path)
     if error["type"] == "extra_forbidden":
-        return unknown_key(prefix, error["input"], key, table.model_fields)
+        return unknown_key(f"{place}.", error["input"], str(key), fields)
     if error["type"] == "missing":
-        return f"{prefix}{key}: missing; {table.model_fields[key].description}"
-    return f"{prefix}{key} = {shown(error['input'])}: {_expected(error)}"
+        return f"{place}.{key}: missing; {fields[str(key)].description}"
+    return f"{_place(place, [key])} = {shown(error['input'])}: {_expected(error)}"
 
 
-def _table_at(model: type[BaseModel], path: Sequence[str]) -> type[BaseModel]:
+def _place(where: str, path: Sequence[str | int]) -> str:
+    """Keys with a dot before them, places in an array in brackets: channel[1].tone[0]."""
+    return where + "".join(f"[{step}]" if isinstance(step, int) else f".{step}" for step in path)
+
+
+def _table_at(model: type[BaseModel], path: Sequence[str | int]) -> type[BaseModel]:
     for step in path:
-        inner: Any = model.model_fields[step].annotation
-        model = inner
+        if isinstance(step, str):
+            model = _table_in(model.model_fields[step].annotation)
     return model
+
+
+def _table_in(annotation: Any) -> type[BaseModel]:
+    """The one model in an annotation: Model, Model | None, tuple[Model, ...]."""
+    choices = [annotation, *get_args(annotation)]
+    return next(one for one in choices if isinstance(one, type) and issubclass(one, BaseModel))
 
 
 def _expected(error: ErrorDetails) -> str:
