@@ -37,8 +37,8 @@ class Bank:
     noise_hz: one-sided noise bandwidth of the baseband.
     fixed_gain: the receiver's gain is fixed, so levels mean something.
     learned_levels: learned reference levels, channel name -> dBFS; outlives resets of the stages.
-    accuracy: of the receiver, as the settings state it.
     labels: quantity -> values of its second label over all banks, in which order its columns stand.
+    accuracy: of the receiver, as the settings state it.
     """
 
     channels: tuple[Channel, ...]
@@ -47,8 +47,8 @@ class Bank:
     noise_hz: float
     fixed_gain: bool
     learned_levels: dict[str, float]
-    accuracy: Accuracy = Accuracy()
     labels: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
+    accuracy: Accuracy = Accuracy()
 
     @property
     def hop_s(self) -> float:
