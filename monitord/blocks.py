@@ -173,6 +173,7 @@ class Detected:
     amplitude: carrier amplitude (channels,), full scale = 1; NaN where there is no carrier.
     hop_amplitude: amplitude of the carrier in this hop alone (channels,), never NaN.
     recent_amplitude: mean of this and the last hop's: lags less than `amplitude`, but moves with deep bass.
+    brief_amplitude: tapered mean of the last half second, where `amplitude` has a whole one (channels,).
     noise_density: reception noise of this hop, power per Hz re full scale (channels,).
     sigma: standard deviation of what disturbs `in_phase` (reception noise, impulses, other carriers), as the
         quadrature shows it, carrier = 1 (channels,).
@@ -185,6 +186,7 @@ class Detected:
     locked: the carrier loop holds a carrier (channels,).
     settled: locked, and enough has been averaged for the amplitude to be exact (channels,).
     broken: the carrier was interrupted within this hop (channels,).
+    fading: selective fading has changed the depth, or may have (channels,).
     second: with every tenth hop since the stream began, these ten together; else None.
     """
 
@@ -195,6 +197,7 @@ class Detected:
     amplitude: Precise
     hop_amplitude: Precise
     recent_amplitude: Precise
+    brief_amplitude: Precise
     noise_density: Precise
     sigma: Precise
     phase: Precise
@@ -204,6 +207,7 @@ class Detected:
     locked: Flags
     settled: Flags
     broken: Flags
+    fading: Flags
     second: Second | None = None
 
     @property

@@ -247,3 +247,41 @@ def recorded_programme(
     mono = audio.mean(axis=1) - audio.mean()
     mono *= np.clip(np.minimum(np.arange(frames), np.arange(frames)[::-1]) / (0.01 * rate), 0, 1)
     return scaled_to_peak(low_passed(mono, rate, band_hz, frames_of(rate_hz, seconds)), negative_peak)
+
+
+def fading_path(
+    rate_hz: float, frames: int, spread_hz: float, rng: np.random.Generator
+) -> NDArray[np.complex128]:
+    """Gain of one Rayleigh path (Watterson model; ITU-R F.1487): mean power 1, Gaussian Doppler spectrum.
+
+    The spread is the 2-sigma width of the spectrum (CHECKS B16): sigma = spread / 2. White complex noise is shaped by
+    exp(-f^2 / (4 sigma^2)), the root of the wanted spectrum. Made at a few points per second and interpolated by
+    its Fourier series to `rate_hz`.
+    """
+    slow_hz = max(16 * spread_hz, 4.0)
+    count = max(64, round(frames / rate_hz * slow_hz))
+    frequency = np.fft.fftfreq(count, 1 / slow_hz)
+    shape = np.exp(-(frequency**2) / spread_hz**2)
+    shape *= np.sqrt(count / np.sum(shape**2))
+    coefficients = np.fft.fft(rng.standard_normal((count, 2)).view(np.complex128)[:, 0] / np.sqrt(2)) * shape
+    slow = np.fft.ifft(coefficients)
+    at = np.arange(frames) * (slow_hz / rate_hz)
+    whole = np.minimum(at.astype(int), count - 2)
+    # Sixteen points to the spread's width: a straight line between two is within 1 %.
+    return np.asarray(slow[whole] + (slow[whole + 1] - slow[whole]) * (at - whole))
+
+
+def by_skywave(
+    samples: NDArray[np.complex128], rate_hz: float, delay_s: float, spread_hz: float, seed: int
+) -> NDArray[np.complex128]:
+    """Samples over two equal Rayleigh paths `delay_s` apart, mean power kept; over one where the delay is 0.
+
+    The delay is rounded to whole samples; what comes before the first sample is zero.
+    """
+    rng = np.random.default_rng(seed)
+    direct = fading_path(rate_hz, len(samples), spread_hz, rng) * samples
+    lag = round(delay_s * rate_hz)
+    if lag == 0:
+        return direct
+    late = np.concatenate([np.zeros(lag), samples[:-lag]])
+    return np.asarray((direct + fading_path(rate_hz, len(samples), spread_hz, rng) * late) / np.sqrt(2))

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from monitord.blocks import Baseband, Complex, Detected, Flags, Precise, Real
 from monitord.condition.grid import STEPS
 from monitord.detect.averaging import TaperedMean
+from monitord.detect.fading import FadingWatch
 from monitord.detect.loop import CarrierLoop
 from monitord.detect.noise import QuadratureNoise, with_floor
 from monitord.detect.search import LineSearch
@@ -65,6 +66,7 @@ class CarrierRecovery:
         self._search = LineSearch(count, self._rate_hz, self._frames, STEPS, self._acquire_hz)
         self._mean = TaperedMean(count, self._frames, self._average_hops, STEPS)
         self._seconds = Seconds(self._bank)
+        self._fading = FadingWatch(self._bank)
         self._phase = np.zeros(count)
         self._speed = np.zeros(count)  # rad/s
         self._amplitude = np.zeros(count)  # of the last hops, for the loop
@@ -103,14 +105,16 @@ class CarrierRecovery:
         self._last_hop = hop_amplitude
         glimpse = self._seek(baseband.samples)
         scale = (1 / amplitude).astype(np.float32)[:, None]
+        coherent = samples * scale
         detected = Detected(
             in_phase=in_phase(samples, baseband.samples) * scale,
-            coherent=samples * scale,
+            coherent=coherent,
             rate_hz=self._rate_hz,
             span=baseband.span,
             amplitude=amplitude,
             hop_amplitude=hop_amplitude,
             recent_amplitude=recent_amplitude,
+            brief_amplitude=np.where(locked, self._mean.brief, np.nan),
             noise_density=noise,
             sigma=sigma,
             phase=phase + steps.imag / np.maximum(self._amplitude, _LEAST_AMPLITUDE)[:, None],
@@ -120,6 +124,7 @@ class CarrierRecovery:
             locked=locked,
             settled=settled,
             broken=broken,
+            fading=self._fading.judge(coherent, amplitude, noise),
         )
         return replace(detected, second=self._seconds.take(detected))
 

@@ -2,10 +2,14 @@
 
 from collections.abc import Sequence
 
+from monitord.measure.audiobandwidth import AudioBandwidthMeter
 from monitord.measure.carrier import CarrierMeter
 from monitord.measure.excursions import ExcursionMeter
+from monitord.measure.flattops import FlatTopMeter
 from monitord.measure.ident import IdentMeter
 from monitord.measure.modulation import ModulationMeter
+from monitord.measure.silence import SilenceMeter
+from monitord.measure.testtone import SteadyToneMeter
 from monitord.measure.tonedepth import ToneDepthMeter
 from monitord.quantities import Quantity
 from monitord.settings import Channel
@@ -17,6 +21,10 @@ METERS: tuple[type[Meter], ...] = (
     ExcursionMeter,
     ToneDepthMeter,
     IdentMeter,
+    SteadyToneMeter,
+    FlatTopMeter,
+    SilenceMeter,
+    AudioBandwidthMeter,
 )
 
 

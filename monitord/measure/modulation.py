@@ -5,6 +5,7 @@ from collections.abc import Mapping
 import numpy as np
 
 from monitord.blocks import Detected, Flags, Precise, Real
+from monitord.detect.averaging import BRIEF_HOPS
 from monitord.measure.noiselift import LEAST_NEAR, NEAR_SIGMA, Top, largest, lift, spread
 from monitord.measure.truepeak import TruePeaks
 from monitord.measure.validity import peaks_mean_something
@@ -15,7 +16,7 @@ WINDOW_S = 10.0
 RECURRING_WINDOW_S = 60.0
 RECURRING_RANK = 10  # common practice: how many make "frequently recurring"
 _RECURRING_SHARE = 0.9
-_MOVING = 0.03  # of the carrier against its mean: peaks wait for the mean around them
+_MOVING = 0.01  # of the carrier's brief mean against the long one: peaks wait for the brief mean around them
 _OWN_ERROR = 0.001  # of filter, interpolation and mean together, without noise: 95 % of tones and programme
 _LEAPT = 0.1  # and against that: no peak is told
 
@@ -93,6 +94,9 @@ class ModulationMeter:
         self._recent = np.full((self._slots, count), np.nan)  # the carrier's amplitude about then
         self._sigma = np.full((self._slots, count), np.nan)  # of the reception noise
         self._power = np.full((self._slots, count), np.nan)  # mean square of the modulation, noise subtracted
+        self._where = np.zeros((self._slots, 2, count))  # of the peaks, in hops from the middle of theirs
+        self._brief = np.full((self._slots, count), np.nan)  # the carrier's brief mean as it was taken
+        self._moving = np.zeros((self._average_hops // 2 + 1, count), bool)  # the newest is the last
         self._place = 0
         self._amplitude = np.full(count, np.nan)  # of the hop before
         self._valid_hops = np.zeros(count, np.int64)
@@ -108,16 +112,24 @@ class ModulationMeter:
         """See stage.Meter."""
         wave = self._true.fresh
         np.subtract(detected.in_phase, 1, out=wave)
-        highest, lowest = self._true.find()
-        usable = detected.settled & ~detected.broken
+        seam = self._true.seam
+        seam += 1
+        seam *= (self._amplitude / detected.amplitude).astype(np.float32)[:, None]
+        seam -= 1
+        highest, lowest, where = self._true.find()
+        usable = detected.settled & ~detected.broken & ~detected.fading
         peaks = np.where(usable & peaks_mean_something(detected, self._bank), [highest, -lowest], np.nan)
         noise_power = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         sigma = np.sqrt(noise_power)
         near = self._near_top(wave, highest, lowest, sigma)
-        moving = np.abs(detected.recent_amplitude / detected.amplitude - 1) > _MOVING
+        moving = np.abs(detected.brief_amplitude / detected.amplitude - 1) > _MOVING
         moving &= self._average_hops > 1
+        self._moving[:-1] = self._moving[1:]
+        self._moving[-1] = moving
         self._remember(np.where(moving, np.nan, peaks), near, sigma, detected)
         square = np.einsum("cf,cf->c", wave, wave) / self._bank.frames - noise_power
+        self._where[self._place] = where - 0.5
+        self._brief[self._place] = detected.brief_amplitude
         self._power[self._place] = np.where(usable, square, np.nan)
         self._raw[self._place] = (1 + peaks * [[1], [-1]]) * detected.amplitude
         self._add_square(square, usable & ~moving)
@@ -159,31 +171,48 @@ class ModulationMeter:
         self._square_hops += use
 
     def _center(self, amplitude: Precise) -> None:
-        """Refer the peaks of half an averaging time ago to the carrier's mean around them, now that it is known.
+        """Refer earlier peaks to the carrier's mean around them, now that it is known.
 
-        The detector can only look back; where the carrier moves, its mean lags by half its length, and the peaks
-        wait until they can be referred to what was there. Where it leapt, no mean is right.
+        The detector can only look back, and its mean lags by half its length. Where the carrier stands, the peaks of
+        half an averaging time ago are referred to the long mean. Where it moves, those of three hops ago are referred
+        to a parabola through the brief means about their hop and its neighbours; until then they wait.
         """
         half = self._average_hops // 2
         around = amplitude if self._average_hops % 2 else (amplitude + self._amplitude) / 2
         self._amplitude = amplitude
-        place = (self._place - half) % self._slots
-        centered = (self._raw[place] / around - 1) * [[1], [-1]]
-        self._peaks[place] = np.where(np.isfinite(around), centered, self._peaks[place])
-        about = (place + np.arange(-1, min(half, 1) + 1)) % self._slots
-        leapt = (np.abs(self._recent[about] / around - 1) > _LEAPT).any(axis=0)
+        self._refer(half, around, np.stack([around, around]), ~self._moving[0])
+        back = BRIEF_HOPS // 2 + 1
+        if half >= back:
+            before, around, after = self._brief[(self._place - np.arange(2, -1, -1)) % self._slots]
+            away = self._where[(self._place - back) % self._slots]
+            there = around + away * (after - before) / 2 + np.square(away) * (after - 2 * around + before) / 2
+            self._refer(back, around, there, self._moving[-1 - back])
+        self._valid_hops += np.isfinite(self._peaks[(self._place - half) % self._slots, 0])
+
+    def _refer(self, back: int, around: Precise, there: Precise, rows: Flags) -> None:
+        """Refer the peaks and squares of `back` hops ago, in some rows; drop them where the carrier leapt.
+
+        around: the carrier about the hop (channels,); there: where its two peaks are (2, channels).
+        """
+        place = (self._place - back) % self._slots
+        use = rows & np.isfinite(around)
+        centered = (self._raw[place] / there - 1) * [[1], [-1]]
+        self._peaks[place] = np.where(use, centered, self._peaks[place])
+        about = (place + np.arange(-1, min(back, 1) + 1)) % self._slots
+        leapt = use & (np.abs(self._recent[about] / around - 1) > _LEAPT).any(axis=0)
         self._peaks[place, :, leapt] = np.nan
-        self._valid_hops += np.isfinite(self._peaks[place, 0])
         # The same for the squares that waited: (1 + m) in units of the carrier then, g times that of the carrier now.
         square, mean = self._later[place]
         g = self._level[place] / around
         square = g**2 * (1 + 2 * mean + square) - 2 * g * (1 + mean) + 1
-        self._add_square(square, np.isfinite(square) & ~leapt)
+        self._add_square(square, use & np.isfinite(square) & ~leapt)
+        self._later[place, :, use] = np.nan
 
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
         heard = self._heard  # nothing of the past stands for an interval without a valid hop
-        window = (self._place - np.arange(self._window)) % self._slots
+        waiting = self._average_hops // 2  # the newest may not be known yet
+        window = (self._place - np.arange(self._window + waiting)) % self._slots
         sigma = self._sigma[self._place]
         rms = np.sqrt(np.maximum(_mean_known(self._power[window]), 0))
         top = largest(self._peaks[window], self._near[window], sigma, rms)

@@ -7,6 +7,7 @@ images lie so far out that 17 taps reject them by 100 dB.
 """
 
 import numpy as np
+from numpy.typing import NDArray
 
 from monitord.blocks import Precise, Real
 from monitord.condition.grid import STEPS
@@ -48,13 +49,21 @@ class TruePeaks:
         """Where to put the next hop, float32 (channels, frames), before `find`."""
         return self._wave[:, 2 * self._margin :]
 
+    @property
+    def seam(self) -> Real:
+        """What is left of the hop before, float32 (channels, samples): to be brought to the units of the next."""
+        return self._wave[:, : 2 * self._margin]
+
     def advance(self) -> None:
         """Make room for the next hop."""
         edge = 2 * self._margin
         self._wave[:, :edge] = self._wave[:, -edge:]
 
-    def find(self) -> tuple[Precise, Precise]:
-        """Largest and smallest value of the hop, float64 (channels,) each; NaN where the wave has NaN."""
+    def find(self) -> tuple[Precise, Precise, Precise]:
+        """Largest and smallest value of the hop, float64 (channels,) each, and where they are, (2, channels).
+
+        Values are NaN where the wave has NaN. A place is a part of the hop: 0 its beginning, 1 its end.
+        """
         rows, margin = len(self._row), self._margin
         parts = self._wave[:, margin : margin + self._frames].reshape(rows, STEPS, -1)
         extreme = np.concatenate([parts.max(axis=2), -parts.min(axis=2)])  # then both polarities go one way
@@ -64,12 +73,13 @@ class TruePeaks:
         place = chosen * parts.shape[2] + pieces.argmax(axis=2) + margin
         around = self._wave[self._row_of_both[:, :, None], place[:, :, None] + _TAP]
         around[rows:] *= -1
-        peak = _refined(around @ self._kernel)
-        return peak[:rows], -peak[rows:]
+        peak, candidate = _refined(around @ self._kernel)
+        where = place[self._row_of_both[:, 0], candidate].reshape(2, rows)
+        return peak[:rows], -peak[rows:], (where - self._margin) / self._frames
 
 
-def _refined(fine: Real) -> Precise:
-    """Top of the highest of the interpolated stretches (rows, candidates, points), by a parabola (rows,)."""
+def _refined(fine: Real) -> tuple[Precise, NDArray[np.int64]]:
+    """Top of the highest of the interpolated stretches (rows, candidates, points), by a parabola, and which it is."""
     rows, candidates, points = fine.shape
     flat = fine.reshape(rows, candidates * points)
     inner = fine[:, :, 1:-1].reshape(rows, candidates * (points - 2))
@@ -79,4 +89,4 @@ def _refined(fine: Real) -> Precise:
     low, mid, high = (flat[row, place + step].astype(np.float64) for step in (-1, 0, 1))
     bend = 2 * mid - low - high
     lift = np.square(high - low) / (8 * np.where(bend > 0, bend, np.inf))
-    return np.asarray(mid + np.minimum(lift, np.maximum(bend, 0)))
+    return np.asarray(mid + np.minimum(lift, np.maximum(bend, 0))), best // (points - 2)

@@ -32,8 +32,10 @@ class FaultJudge:
         weak = np.square(detected.hop_amplitude) < 10 ** (WEAK_C_N0_DBHZ / 10) * detected.noise_density
         weak |= ~peaks_mean_something(detected, self._bank)
         bits = self._always.copy()
-        if not span.fresh and not span.clipped and detected.settled.all() and not weak.any():
+        calm = detected.settled.all() and not weak.any() and not detected.fading.any()
+        if calm and not span.fresh and not span.clipped:
             return bits
+        bits[detected.fading] |= np.uint32(Fault.FADING)
         bits[~detected.locked] |= np.uint32(Fault.UNLOCKED)
         bits[weak & detected.locked] |= np.uint32(Fault.WEAK_SIGNAL)
         bits[detected.locked & ~detected.settled] |= np.uint32(Fault.SETTLING)

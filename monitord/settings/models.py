@@ -316,6 +316,7 @@ class ChannelKeys(_Section):
     expect: a "carrier" is expected here, "none", or "any" (neither alarms).
     tone: the tones whose depth is measured.
     ident: the ident that is to be heard; None: none is.
+    silence_db: rms of the modulation below which a channel is silent, re a sine of 100 %.
     """
 
     bandwidth_hz: Annotated[float, _at_least(MIN_BANDWIDTH_HZ, "Hz")] = DEFAULT_BANDWIDTH_HZ
@@ -331,6 +332,7 @@ class ChannelKeys(_Section):
     loss_drop_db: Annotated[float, _above(0, 100, "dB")] = 10.0
     loss_after_s: Annotated[float, _within(0, 3600, "s")] = 0.5
     expect: Literal["carrier", "none", "any"] = "carrier"
+    silence_db: Annotated[float, _within(-80, 0, "dB")] = -40.0
     limits: Limits = Limits()
     tone: Annotated[tuple[Tone, ...], Field(strict=False), AfterValidator(_tones)] = ()
     ident: Ident | None = None
