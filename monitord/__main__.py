@@ -39,12 +39,14 @@ def check(arguments: argparse.Namespace) -> int:
 
 def replay(arguments: argparse.Namespace) -> int:
     """The chain over recordings."""
+    from monitord.measure.quasipeak import QuasiPeakMeter
     from monitord.replay import Replay, channels_named, writer_for
 
     signal.signal(signal.SIGTERM, signal.default_int_handler)  # stopped either way, the summary is written
     channels = channels_named(arguments.settings, arguments.recording[0])
-    writer = writer_for(arguments.format, channels, sys.stdout)
-    good = Replay(writer, arguments.settings, arguments.every).run(arguments.recording)
+    more_meters = (QuasiPeakMeter,) if arguments.quasi_peak else ()
+    writer = writer_for(arguments.format, channels, sys.stdout, more_meters)
+    good = Replay(writer, arguments.settings, arguments.every, more_meters).run(arguments.recording)
     sys.stdout.flush()
     return DONE if good else FAILED
 
@@ -75,6 +77,9 @@ def parser() -> argparse.ArgumentParser:
     verb.add_argument("--settings", type=Path, metavar="S.toml", help="channels to measure")
     verb.add_argument("--every", type=_seconds, default=1.0, metavar="SECONDS", help="interval of a reading")
     verb.add_argument("--format", choices=("json", "table", "csv"), default="table")
+    verb.add_argument(
+        "--quasi-peak", action="store_true", help="also the quasi-peak noise of the pauses (ITU-R BS.468-4)"
+    )
     verb.set_defaults(do=replay)
     return top
 

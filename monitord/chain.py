@@ -99,7 +99,9 @@ def banks_of(channels: Sequence[Channel]) -> list[list[Channel]]:
 class _BankChain:
     """Detector and meters of one bank, each meter behind a guard."""
 
-    def __init__(self, bank: Bank, quantities: Sequence[Quantity], tally: Tally) -> None:
+    def __init__(
+        self, bank: Bank, meters: Sequence[type[Meter]], quantities: Sequence[Quantity], tally: Tally
+    ) -> None:
         self.bank = bank
         self._quantities = quantities
         self._judge = FaultJudge(bank)
@@ -107,7 +109,7 @@ class _BankChain:
         self._detector = DETECTORS[bank.channels[0].detector]()
         self._detector.prepare(bank)
         self._meters: dict[str, Meter] = {}
-        for make in METERS:
+        for make in meters:
             meter = make()
             meter.prepare(bank)
             self._meters[type(meter).__name__] = meter
@@ -186,12 +188,15 @@ class Chain:
         outlets: Sequence[Outlet],
         tally: Tally,
         interval_s: float = INTERVAL_S,
+        more_meters: Sequence[type[Meter]] = (),
     ) -> None:
+        """`more_meters`: what measures besides METERS in this run."""
         groups = banks_of(channels)
         self._tally = tally
         self._tuner = Tuner(stream.rate_hz, stream.center_hz, stream.real, groups)
         learned: dict[str, float] = {}
-        quantities = quantities_of(channels)
+        meters = (*METERS, *more_meters)
+        quantities = quantities_of(channels, more_meters)
         labels = {quantity.name: quantity.keys for quantity in quantities}
         self._banks = [
             _BankChain(
@@ -205,6 +210,7 @@ class Chain:
                     labels,
                     stream.accuracy(group),
                 ),
+                meters,
                 quantities,
                 tally,
             )
@@ -221,7 +227,7 @@ class Chain:
         self._interval_hops = max(1, round(interval_s / self._tuner.grid.hop_s))
         self._faults: NDArray[np.uint32] = np.zeros(len(banked), np.uint32)
         self._pending: list[Span] = []
-        for make in METERS:
+        for make in meters:
             tally.stage_failures.setdefault(make.__name__, 0)
         for stage in ("condition", "detect", "measure", "notice", "publish"):
             tally.stage_seconds.setdefault(stage, 0.0)
@@ -234,6 +240,7 @@ class Chain:
         outlets: Sequence[Outlet],
         tally: Tally,
         interval_s: float = INTERVAL_S,
+        more_meters: Sequence[type[Meter]] = (),
     ) -> "Chain":
         """The chain, with all rules, for the stream that begins with `block`.
 
@@ -243,7 +250,8 @@ class Chain:
         problems = check_span(settings, stream.rate_hz, stream.center_hz, stream.real)
         if problems:
             raise ConfigError(problems)
-        return cls(settings.channels, stream, [make() for make in RULES], outlets, tally, interval_s)
+        rules = [make() for make in RULES]
+        return cls(settings.channels, stream, rules, outlets, tally, interval_s, more_meters)
 
     @property
     def wanted(self) -> int:

@@ -21,7 +21,7 @@ from monitord.publish.table import Table
 from monitord.publish.tally import Tally
 from monitord.service import count_block
 from monitord.settings import Channel, Settings, Source, load
-from monitord.stage import Outlet, SampleSource
+from monitord.stage import Meter, Outlet, SampleSource
 
 _SEARCH_S = 2.0
 _CLEAR_OF_MEDIAN = 100.0
@@ -40,9 +40,11 @@ class Writer(Outlet, Protocol):
         ...
 
 
-def writer_for(form: str, channels: Sequence[Channel], out: TextIO) -> Writer:
+def writer_for(
+    form: str, channels: Sequence[Channel], out: TextIO, more_meters: Sequence[type[Meter]] = ()
+) -> Writer:
     """The writer of a format (json, csv or table) for the quantities of these channels."""
-    quantities = quantities_of(channels)
+    quantities = quantities_of(channels, more_meters)
     if form == "json":
         return JsonLines(quantities, out)
     if form == "csv":
@@ -82,10 +84,18 @@ class Counter:
 class Replay:
     """Runs recordings one after the other into one writer."""
 
-    def __init__(self, writer: Writer, settings_path: Path | None, every_s: float) -> None:
+    def __init__(
+        self,
+        writer: Writer,
+        settings_path: Path | None,
+        every_s: float,
+        more_meters: Sequence[type[Meter]] = (),
+    ) -> None:
+        """`more_meters`: what measures besides the daemon's meters; the writer must know them too."""
         self._writer = writer
         self._settings_path = settings_path
         self._every_s = every_s
+        self._more_meters = more_meters
         self._counter = Counter()
         self._tally = Tally()
         self._seconds = 0.0
@@ -143,7 +153,7 @@ class Replay:
             with tqdm(unit="s", unit_scale=True, disable=not sys.stderr.isatty(), leave=False) as progress:
                 for block in _blocks(source):
                     chain = chain or Chain.beginning_with(
-                        block, settings, outlets, self._tally, self._every_s
+                        block, settings, outlets, self._tally, self._every_s, self._more_meters
                     )
                     count_block(self._tally, block)
                     chain.process(block)

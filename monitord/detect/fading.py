@@ -78,7 +78,7 @@ class FadingWatch:
         return np.asarray(moved & (slope < _FOLLOWS))
 
     def _moving(self, noise: Precise) -> Flags:
-        """Whether the carrier's level has moved within the window (channels,).
+        """Whether the carrier's level has moved within the window, or is not known yet (channels,).
 
         The highest hop of each half second tells: where a carrier is keyed down and up again, it stands.
         """
@@ -87,4 +87,5 @@ class FadingWatch:
             blocks[self._place // _BLOCK_HOPS] = np.nan  # it is not over yet
         highest, lowest = np.fmax.reduce(blocks), np.fmin.reduce(blocks)
         least = np.maximum(_MOVES, _MOVES_NOISE * np.sqrt(noise / self._noise_hz * _BLOCK_HOPS))
-        return np.asarray(highest > (1 + least) * lowest)
+        young = np.isfinite(self._carrier).sum(axis=0) <= _BLOCK_HOPS
+        return np.asarray(young | (highest > (1 + least) * lowest))

@@ -6,8 +6,10 @@ from monitord.measure.audiobandwidth import AudioBandwidthMeter
 from monitord.measure.carrier import CarrierMeter
 from monitord.measure.excursions import ExcursionMeter
 from monitord.measure.flattops import FlatTopMeter
+from monitord.measure.hum import HumMeter
 from monitord.measure.ident import IdentMeter
 from monitord.measure.modulation import ModulationMeter
+from monitord.measure.pausenoise import PauseNoiseMeter
 from monitord.measure.silence import SilenceMeter
 from monitord.measure.testtone import SteadyToneMeter
 from monitord.measure.tonedepth import ToneDepthMeter
@@ -25,9 +27,14 @@ METERS: tuple[type[Meter], ...] = (
     FlatTopMeter,
     SilenceMeter,
     AudioBandwidthMeter,
+    PauseNoiseMeter,
+    HumMeter,
 )
 
 
-def quantities_of(channels: Sequence[Channel]) -> tuple[Quantity, ...]:
+def quantities_of(
+    channels: Sequence[Channel], more_meters: Sequence[type[Meter]] = ()
+) -> tuple[Quantity, ...]:
     """All quantities of all meters, with the label values that these channels' settings name."""
-    return tuple(quantity.resolved(channels) for meter in METERS for quantity in meter.quantities)
+    meters = (*METERS, *more_meters)
+    return tuple(quantity.resolved(channels) for meter in meters for quantity in meter.quantities)

@@ -317,6 +317,7 @@ class ChannelKeys(_Section):
     tone: the tones whose depth is measured.
     ident: the ident that is to be heard; None: none is.
     silence_db: rms of the modulation below which a channel is silent, re a sine of 100 %.
+    mains_hz: mains frequency at the transmitter, for its hum: 50, 60, or "found" (whichever fits).
     """
 
     bandwidth_hz: Annotated[float, _at_least(MIN_BANDWIDTH_HZ, "Hz")] = DEFAULT_BANDWIDTH_HZ
@@ -333,6 +334,7 @@ class ChannelKeys(_Section):
     loss_after_s: Annotated[float, _within(0, 3600, "s")] = 0.5
     expect: Literal["carrier", "none", "any"] = "carrier"
     silence_db: Annotated[float, _within(-80, 0, "dB")] = -40.0
+    mains_hz: Literal[50, 60, "found"] = "found"
     limits: Limits = Limits()
     tone: Annotated[tuple[Tone, ...], Field(strict=False), AfterValidator(_tones)] = ()
     ident: Ident | None = None
