@@ -170,7 +170,9 @@ class Detected:
         no carrier.
     coherent: the baseband turned to the carrier's phase, complex64 (channels, frames), in the same scale. Its real part
         is what the synchronous detector gives, its magnitude the envelope.
-    amplitude: carrier amplitude (channels,), full scale = 1; NaN where there is no carrier.
+    amplitude: the carrier amplitude that depth refers to (channels,), full scale = 1; NaN where there is no carrier.
+    mean_amplitude: the carrier's tapered mean over the averaging time; the same, but for channels whose depth refers to
+        the unmodulated carrier (channels,).
     hop_amplitude: amplitude of the carrier in this hop alone (channels,), never NaN.
     recent_amplitude: mean of this and the last hop's: lags less than `amplitude`, but moves with deep bass.
     brief_amplitude: tapered mean of the last half second, where `amplitude` has a whole one (channels,).
@@ -195,6 +197,7 @@ class Detected:
     rate_hz: float
     span: Span
     amplitude: Precise
+    mean_amplitude: Precise
     hop_amplitude: Precise
     recent_amplitude: Precise
     brief_amplitude: Precise

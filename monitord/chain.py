@@ -90,7 +90,7 @@ def banks_of(channels: Sequence[Channel]) -> list[list[Channel]]:
             channel.bandwidth_hz,
             channel.acquire_hz,
             channel.loop_bandwidth_hz,
-            channel.carrier_average_s,
+            channel.averaging_s,
         )
         banks.setdefault(key, []).append(channel)
     return list(banks.values())

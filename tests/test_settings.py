@@ -269,7 +269,7 @@ def test_a_file_of_many_mistakes_tells_all_of_them_in_one_run() -> None:
     negative_peak = 3
     [[channel]]
     carrier_hz = nan
-    carrier_control = true
+    carrier_control = 1
     [[raster]]
     first_hz = 2
     last_hz = 1
@@ -293,7 +293,7 @@ def test_a_file_of_many_mistakes_tells_all_of_them_in_one_run() -> None:
         'channel[1].name = "a": is the name of channel[0] too; must be a name of its own',
         "channel[2].name: missing; must be 1 to 64 letters",
         "channel[2].carrier_hz = nan: must be a finite number",
-        "channel[2].carrier_control = true: is not available in this version",
+        "channel[2].carrier_control = 1: must be true or false",
         "raster[0].step_hz = -9: must be more than 0 Hz",
         "raster[0].last_hz = 1: must be at least first_hz (2)",
         'http.listen = "9560": must be "host:port"',
@@ -358,7 +358,7 @@ def test_a_topic_is_refused_where_it_has_no_meaning() -> None:
         ("loss_drop_db = 0", "must be more than 0 and at most 100 dB"),
         ("loss_after_s = -1", "must be from 0 to 3600 s"),
         ('expect = "silence"', 'must be "carrier", "none" or "any"'),
-        ('depth_reference = "unmodulated"', 'is not available in this version; must be "present"'),
+        ('depth_reference = "absent"', 'must be "present" or "unmodulated"'),
         ('detector = "rectifier"', 'must be one of the detectors of this version: "synchronous", "envelope"'),
         ("limits = 3", "must be a table"),
         ('limits = {hold_s = "x"}', "must be a number"),

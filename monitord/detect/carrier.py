@@ -17,6 +17,7 @@ from monitord.detect.averaging import TaperedMean
 from monitord.detect.fading import FadingWatch
 from monitord.detect.loop import CarrierLoop
 from monitord.detect.noise import QuadratureNoise, with_floor
+from monitord.detect.reference import DepthReference
 from monitord.detect.search import LineSearch
 from monitord.detect.seconds import Seconds
 from monitord.stage import Bank
@@ -50,7 +51,7 @@ class CarrierRecovery:
         self._acquire_hz = first.acquire_hz
         self._pass_hz = first.bandwidth_hz + first.acquire_hz
         self._noise_hz = bank.noise_hz
-        self._average_hops = max(1, round(first.carrier_average_s / self._hop_s))
+        self._average_hops = max(1, round(first.averaging_s / self._hop_s))
         self._enough = 10 ** (
             (np.array([channel.present_c_n0_dbhz for channel in bank.channels]) - _LOCK_BELOW_PRESENT_DB) / 10
         )
@@ -67,6 +68,7 @@ class CarrierRecovery:
         self._mean = TaperedMean(count, self._frames, self._average_hops, STEPS)
         self._seconds = Seconds(self._bank)
         self._fading = FadingWatch(self._bank)
+        self._reference = DepthReference(self._bank)
         self._phase = np.zeros(count)
         self._speed = np.zeros(count)  # rad/s
         self._amplitude = np.zeros(count)  # of the last hops, for the loop
@@ -97,7 +99,10 @@ class CarrierRecovery:
         self._advance(path[:, -1], speed_change, line)
         locked = self._tracking & (self._good >= _CONFIRMED_AFTER)
         settled = locked & (self._mean.heard >= min(SETTLED_HOPS, self._average_hops))
-        amplitude = np.where(locked, self._mean.mean, np.nan)
+        mean = np.where(locked, self._mean.mean, np.nan)
+        brief = np.where(locked, self._mean.brief, np.nan)
+        modulation = _modulation(samples, mean, noise * self._noise_hz)
+        amplitude = self._reference.amplitude(mean, brief, modulation, settled & ~broken)
         spread = np.maximum(np.maximum(noise, disturbance), self._smooth_noise)
         sigma = np.sqrt(spread * self._noise_hz) / amplitude
         hop_amplitude = np.where(self._tracking, np.abs(line), 0.0)
@@ -112,9 +117,10 @@ class CarrierRecovery:
             rate_hz=self._rate_hz,
             span=baseband.span,
             amplitude=amplitude,
+            mean_amplitude=mean,
             hop_amplitude=hop_amplitude,
             recent_amplitude=recent_amplitude,
-            brief_amplitude=np.where(locked, self._mean.brief, np.nan),
+            brief_amplitude=brief,
             noise_density=noise,
             sigma=sigma,
             phase=phase + steps.imag / np.maximum(self._amplitude, _LEAST_AMPLITUDE)[:, None],
@@ -124,7 +130,7 @@ class CarrierRecovery:
             locked=locked,
             settled=settled,
             broken=broken,
-            fading=self._fading.judge(coherent, amplitude, noise),
+            fading=self._fading.judge(samples, mean, modulation, noise),
         )
         return replace(detected, second=self._seconds.take(detected))
 
@@ -214,3 +220,11 @@ class CarrierRecovery:
         self._doubts[new] = 0
         self._mean.begin(new, line.in_phase[line.found], line.steady[line.found])
         return glimpse
+
+
+def _modulation(samples: Complex, carrier: Precise, noise_power: Precise) -> Precise:
+    """Mean square of the modulation in phase, the carrier = 1, noise subtracted (channels,)."""
+    wave = samples.real
+    square = np.einsum("cf,cf->c", wave, wave) / wave.shape[1]
+    mean = wave.mean(axis=1, dtype=np.float64)
+    return np.asarray((square - np.square(mean) - noise_power) / np.square(carrier))

@@ -35,30 +35,31 @@ class FadingWatch:
     def __init__(self, bank: Bank) -> None:
         count, hops = len(bank.channels), round(_WINDOW_S / (bank.hop_s * _BLOCK_HOPS)) * _BLOCK_HOPS
         self._noise_hz = bank.noise_hz
+        self._carrier_moves = np.array([one.carrier_control for one in bank.channels])  # by itself
         self._told = np.zeros((hops, count), bool)
         self._skewed = np.zeros((hops, count), bool)
         self._carrier = np.full((hops, count), np.nan)
         self._levels = np.full((2, hops, count), np.nan)  # log of the carrier and of its sidebands' rms
         self._place = 0
 
-    def judge(self, coherent: Complex, amplitude: Precise, noise_density: Precise) -> Flags:
+    def judge(self, samples: Complex, mean: Precise, modulation: Precise, noise_density: Precise) -> Flags:
         """Whether each row's hop is not to be trusted (channels,).
 
-        coherent: complex64 (channels, frames), carrier = 1; amplitude, noise_density: as in Detected (channels,).
+        samples: turned to the carrier's phase, complex64 (channels, frames), full scale = 1; mean: the carrier's
+        tapered mean; modulation: mean square of m, noise subtracted; noise_density: as in Detected (channels,).
         """
         place = self._place = (self._place + 1) % len(self._told)
-        noise = noise_density * self._noise_hz / np.square(amplitude)
-        mean = coherent.real.mean(axis=1, dtype=np.float64)
-        modulation = np.einsum("cf,cf->c", coherent.real, coherent.real) / coherent.shape[1] - mean**2 - noise
-        aside = np.einsum("cf,cf->c", coherent.imag, coherent.imag) / coherent.shape[1] - noise
+        noise = noise_density * self._noise_hz / np.square(mean)
+        aside = np.einsum("cf,cf->c", samples.imag, samples.imag) / samples.shape[1] / np.square(mean) - noise
         self._told[place] = modulation > np.maximum(_LEAST_POWER, noise)
         skewed = self._told[place] & (aside > np.maximum(_SKEWED**2 * modulation, _NOISE_CLEAR * noise))
-        self._carrier[place] = carrier = mean * amplitude
-        sidebands = np.sqrt(np.maximum(modulation, 1e-12)) * amplitude
+        carrier = samples.real.mean(axis=1, dtype=np.float64)
+        self._carrier[place] = np.where(np.isfinite(mean), carrier, np.nan)
+        sidebands = np.sqrt(np.maximum(modulation, 1e-12)) * mean
         self._levels[:, place] = np.where(
             self._told[place], np.log([np.maximum(carrier, 1e-12), sidebands]), np.nan
         )
-        skewed |= self._sunk_alone()
+        skewed |= self._sunk_alone() & ~self._carrier_moves
         self._skewed[place] = skewed
         told = np.maximum(self._told.sum(axis=0), _FEWEST)
         standing = self._skewed.sum(axis=0) > _MANY * told

@@ -58,7 +58,7 @@ class CarrierMeter:
     def prepare(self, bank: Bank) -> None:
         """See stage.Meter."""
         self._bank = bank
-        self._average_hops = max(1, round(bank.channels[0].carrier_average_s / bank.hop_s))
+        self._average_hops = max(1, round(bank.channels[0].averaging_s / bank.hop_s))
         self.reset()
 
     def reset(self) -> None:
@@ -107,7 +107,7 @@ class CarrierMeter:
 
     def _level_dbfs(self, hops: list[Detected]) -> Precise:
         """Mean power of the amplitude averages that make up the interval, from its end backwards."""
-        averages = [np.square(hop.amplitude) for hop in hops[:: -self._average_hops]]
+        averages = [np.square(hop.mean_amplitude) for hop in hops[:: -self._average_hops]]
         return np.asarray(10 * np.log10(np.mean(averages, axis=0)))
 
     def _level_uncertainty_db(self, hops: list[Detected]) -> Precise:

@@ -57,6 +57,7 @@ class ExcursionMeter:
         self._bank = bank
         self._negative = np.array([channel.limits.negative_peak for channel in bank.channels])
         self._positive = np.array([channel.limits.positive_peak for channel in bank.channels])
+        self._follows = np.array([one.depth_reference == "present" for one in bank.channels])
         self._keep = min(bank.frames, round(_LONGEST_S * bank.rate_hz) + 2)
         self._resolution = bank.rate_hz / bank.noise_hz  # samples: nothing shorter can be flat
         self.reset()
@@ -85,6 +86,7 @@ class ExcursionMeter:
     def _above(self, detected: Detected, judged: Flags, clear: Precise) -> tuple[Precise, Precise]:
         # The carrier's mean lags; where the carrier rises, what it is now must not be taken for modulation.
         now = np.maximum(detected.hop_amplitude, detected.recent_amplitude) / detected.amplitude
+        now = np.where(self._follows, now, 1.0)
         ceiling = ((1 + self._positive + clear) * np.fmax(now, 1)).astype(np.float32)
         last_hop = 2 * detected.recent_amplitude - detected.hop_amplitude
         rising = detected.hop_amplitude > _RISING * last_hop  # somewhere in this hop, nobody knows where

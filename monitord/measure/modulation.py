@@ -74,9 +74,11 @@ class ModulationMeter:
         self._bank = bank
         self._window = round(WINDOW_S / bank.hop_s)
         self._slots = round(RECURRING_WINDOW_S / bank.hop_s)
+        self._follows = np.array([one.depth_reference == "present" for one in bank.channels])
+        self._carrier_moves = np.array([one.carrier_control for one in bank.channels])
         self._independent = 2 * bank.noise_hz / bank.rate_hz  # of the samples of a hop
-        self._average_s = bank.channels[0].carrier_average_s
-        self._average_hops = max(1, round(bank.channels[0].carrier_average_s / bank.hop_s))
+        self._average_s = bank.channels[0].averaging_s
+        self._average_hops = max(1, round(bank.channels[0].averaging_s / bank.hop_s))
         self.reset()
 
     def reset(self) -> None:
@@ -122,8 +124,9 @@ class ModulationMeter:
         noise_power = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         sigma = np.sqrt(noise_power)
         near = self._near_top(wave, highest, lowest, sigma)
-        moving = np.abs(detected.brief_amplitude / detected.amplitude - 1) > _MOVING
+        moving = np.abs(detected.brief_amplitude / detected.mean_amplitude - 1) > _MOVING
         moving &= self._average_hops > 1
+        moving &= self._follows
         self._moving[:-1] = self._moving[1:]
         self._moving[-1] = moving
         self._remember(np.where(moving, np.nan, peaks), near, sigma, detected)
@@ -199,7 +202,12 @@ class ModulationMeter:
         centered = (self._raw[place] / there - 1) * [[1], [-1]]
         self._peaks[place] = np.where(use, centered, self._peaks[place])
         about = (place + np.arange(-1, min(back, 1) + 1)) % self._slots
-        leapt = use & (np.abs(self._recent[about] / around - 1) > _LEAPT).any(axis=0)
+        leapt = (
+            use
+            & self._follows
+            & ~self._carrier_moves
+            & (np.abs(self._recent[about] / around - 1) > _LEAPT).any(axis=0)
+        )
         self._peaks[place, :, leapt] = np.nan
         # The same for the squares that waited: (1 + m) in units of the carrier then, g times that of the carrier now.
         square, mean = self._later[place]

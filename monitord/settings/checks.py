@@ -151,6 +151,7 @@ def channel_problems(parts: Sequence[Part[Channel]], span: Range | None) -> Iter
         if part.sound("name") and first.setdefault(name, part.where) != part.where:
             yield part.problem("name", f"is the name of {first[name]} too; must be a name of its own")
         yield from _emission_problems(part)
+        yield from _reference_problems(part)
         yield from _tone_problems(part)
         yield from _ident_problems(part)
         if span is not None and part.sound("carrier_hz", "bandwidth_hz", "acquire_hz"):
@@ -197,10 +198,19 @@ def _neighbour_problems(place: str, tone: Tone, others: Sequence[Tone]) -> Itera
         yield f"{place}.hz = {shown(tone.hz)}: {text}"
 
 
+def _reference_problems(part: Part[Channel] | Part[Raster]) -> Iterator[str]:
+    model = part.model
+    if model.carrier_control and model.depth_reference == "unmodulated":
+        yield part.problem(
+            "depth_reference", 'must be "present" with carrier_control = true: the carrier moves'
+        )
+
+
 def raster_carriers(part: Part[Raster], problems: list[str]) -> list[float]:
     """Carriers of one raster in Hz, ascending; none where its frequencies are wrong."""
     raster = part.model
     problems.extend(_emission_problems(part))
+    problems.extend(_reference_problems(part))
     problems.extend(_tone_problems(part))
     problems.extend(_ident_problems(part))
     found = list(_step_problems(part))

@@ -41,6 +41,7 @@ BUILT_IN_RATE_HZ = 48_000.0
 MIN_RATE_HZ, MAX_RATE_HZ = 1_000.0, 50e6
 MIN_BANDWIDTH_HZ = 100.0
 DEFAULT_BANDWIDTH_HZ = 5_000.0
+CONTROLLED_AVERAGE_S = 0.1
 
 MOST_TONES = 16
 _IDENT_TEXT = re.compile(r"[A-Z0-9]{1,16}")
@@ -122,14 +123,6 @@ def _name_pattern(value: str) -> str:
 def _detector(value: str) -> str:
     if value not in DETECTORS:
         raise ValueError(f"must be one of the detectors of this version: {quoted(DETECTORS)}")
-    return value
-
-
-def _depth_reference(value: str) -> str:
-    if value == "unmodulated":
-        raise ValueError('is not available in this version; must be "present"')
-    if value != "present":
-        raise ValueError('must be "present"')
     return value
 
 
@@ -311,6 +304,8 @@ class ChannelKeys(_Section):
     acquire_hz: how far off the carrier may be.
     loop_bandwidth_hz: noise bandwidth of the carrier loop.
     carrier_average_s: over how long the carrier's amplitude is averaged.
+    carrier_control: the station's carrier moves with its programme; depth then refers to the carrier of each 0.1 s.
+    depth_reference: depth refers to the carrier that is "present", or to the "unmodulated" one of the last pause.
     reference_level_dbfs: the usual level of the carrier; None: learned.
     present_c_n0_dbhz, loss_drop_db, loss_after_s: what counts as a carrier, and as its loss.
     expect: a "carrier" is expected here, "none", or "any" (neither alarms).
@@ -326,8 +321,8 @@ class ChannelKeys(_Section):
     acquire_hz: Annotated[float, _at_least(0, "Hz")] = 100.0
     loop_bandwidth_hz: Annotated[float, _within(0.5, 20, "Hz")] = 5.0
     carrier_average_s: Annotated[float, _within(0.1, 10, "s")] = 1.0
-    carrier_control: Annotated[bool, AfterValidator(_not_yet)] = False
-    depth_reference: Annotated[str, AfterValidator(_depth_reference)] = "present"
+    carrier_control: bool = False
+    depth_reference: Literal["present", "unmodulated"] = "present"
     reference_level_dbfs: Annotated[float, _within(-200, 20, "dBFS")] | None = None
     present_c_n0_dbhz: Annotated[float, _within(10, 150, "dB-Hz")] = 35.0
     loss_drop_db: Annotated[float, _above(0, 100, "dB")] = 10.0
@@ -338,6 +333,11 @@ class ChannelKeys(_Section):
     limits: Limits = Limits()
     tone: Annotated[tuple[Tone, ...], Field(strict=False), AfterValidator(_tones)] = ()
     ident: Ident | None = None
+
+    @property
+    def averaging_s(self) -> float:
+        """Over how long the carrier's amplitude is averaged: 0.1 s where it moves with the programme."""
+        return CONTROLLED_AVERAGE_S if self.carrier_control else self.carrier_average_s
 
     @field_validator("emission_bandwidth_hz", mode="before")
     @classmethod
