@@ -47,7 +47,7 @@ def test_overmodulation_of_a_carrier_that_moves_is_told() -> None:
 @pytest.mark.parametrize("depth", [1.25, 1.5])
 def test_e11_depth_of_a_transmitter_that_cuts_off_refers_to_the_carrier_of_the_pause(depth: float) -> None:
     """Pinched off, the mean carrier rises by 3.39 or 8.82 % (CHECKS E11); the positive peak is m all the same."""
-    t = times(10.0)
+    t = times(16.0)
     envelope = np.where(t < 3.0, 1.0, 1 + signals.tone(depth, 200.0, t, -np.pi / 2))
     envelope = signals.low_passed(np.maximum(envelope, 0), RATE_HZ, 5000.0, len(t))
     keys = {"carrier_hz": 0.0, "acquire_hz": 50}
