@@ -4,12 +4,17 @@ from collections.abc import Sequence
 
 from monitord.measure.audiobandwidth import AudioBandwidthMeter
 from monitord.measure.carrier import CarrierMeter
+from monitord.measure.carriershift import CarrierShiftMeter
+from monitord.measure.disagreement import DisagreementMeter
 from monitord.measure.excursions import ExcursionMeter
 from monitord.measure.flattops import FlatTopMeter
 from monitord.measure.hum import HumMeter
 from monitord.measure.ident import IdentMeter
+from monitord.measure.incidentalphase import IncidentalPhaseMeter
 from monitord.measure.modulation import ModulationMeter
 from monitord.measure.pausenoise import PauseNoiseMeter
+from monitord.measure.sidebandbalance import SidebandBalanceMeter
+from monitord.measure.signaltonoise import SignalToNoiseMeter
 from monitord.measure.silence import SilenceMeter
 from monitord.measure.testtone import SteadyToneMeter
 from monitord.measure.tonedepth import ToneDepthMeter
@@ -27,6 +32,11 @@ METERS: tuple[type[Meter], ...] = (
     FlatTopMeter,
     SilenceMeter,
     AudioBandwidthMeter,
+    SignalToNoiseMeter,
+    IncidentalPhaseMeter,
+    SidebandBalanceMeter,
+    DisagreementMeter,
+    CarrierShiftMeter,
     PauseNoiseMeter,
     HumMeter,
 )
