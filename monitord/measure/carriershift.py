@@ -8,6 +8,7 @@ from collections.abc import Mapping
 import numpy as np
 
 from monitord.blocks import Detected, Precise
+from monitord.detect.averaging import BRIEF_HOPS
 from monitord.detect.reference import PAUSE_POWER
 from monitord.quantities import Quantity
 from monitord.stage import Bank
@@ -17,8 +18,9 @@ _MEMORY_S = 60.0
 
 
 class CarrierShiftMeter:
-    """Mean of the modulated hops of the interval over that of the last minute's pauses, less 1; positive = rise.
+    """Mean of the interval's modulated half seconds over that of the last minute's pauses, less 1; positive = rise.
 
+    A half second counts, with the carrier's tapered mean over it, where all of its hops are modulated, or all a pause.
     Absent without modulation or without a pause, while fading, with automatic gain, and with carrier control.
     """
 
@@ -43,6 +45,7 @@ class CarrierShiftMeter:
         """See stage.Meter."""
         count = len(self._bank.channels)
         self._pauses = np.full((self._hops, count), np.nan)
+        self._runs = np.zeros((2, count), np.int64)  # hops of pause, and of modulation, up to now
         self._place = 0
         self._begin()
 
@@ -57,10 +60,12 @@ class CarrierShiftMeter:
         mean = wave.mean(axis=1, dtype=np.float64)
         noise = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         power = np.einsum("cf,cf->c", wave, wave) / wave.shape[1] - np.square(mean) - noise
-        carrier = mean * detected.amplitude
+        alike = usable & np.array([power < PAUSE_POWER, power > _MODULATED_POWER])
+        self._runs = np.where(alike, self._runs + 1, 0)
+        pausing, modulated = self._runs >= BRIEF_HOPS
+        carrier = detected.brief_amplitude
         self._place = (self._place + 1) % self._hops
-        self._pauses[self._place] = np.where(usable & (power < PAUSE_POWER), carrier, np.nan)
-        modulated = usable & (power > _MODULATED_POWER)
+        self._pauses[self._place] = np.where(pausing, carrier, np.nan)
         self._carrier += np.where(modulated, carrier, 0)
         self._modulated += modulated
         return {}
