@@ -133,6 +133,7 @@ class Second:
     amplitude: that carrier, the Hann-weighted mean over this second, full scale = 1 (channels,).
     noise_density: mean reception noise, power per Hz re full scale (channels,).
     usable: the carrier was held, settled and unbroken all through (channels,); other rows mean nothing.
+    noise_gain: as in Detected.
     """
 
     in_phase: Real
@@ -141,6 +142,12 @@ class Second:
     amplitude: Precise
     noise_density: Precise
     usable: Flags
+    noise_gain: float = 1.0
+
+    @property
+    def audio_noise_density(self) -> Precise:
+        """Reception noise in `in_phase`, as in Detected (channels,)."""
+        return self.noise_density * self.noise_gain
 
     @property
     def bin_hz(self) -> float:
@@ -200,6 +207,8 @@ class Detected:
     settled: locked, and enough has been averaged for the amplitude to be exact (channels,).
     broken: the carrier was interrupted within this hop (channels,).
     fading: selective fading has changed the depth, or may have (channels,).
+    noise_gain: power of the reception noise in `in_phase` over that in phase with the carrier.
+    delay_s: by how much `in_phase` lags behind the hop's span.
     second: with every tenth hop since the stream began, these ten together; else None.
     """
 
@@ -222,7 +231,14 @@ class Detected:
     settled: Flags
     broken: Flags
     fading: Flags
+    noise_gain: float = 1.0
+    delay_s: float = 0.0
     second: Second | None = None
+
+    @property
+    def audio_noise_density(self) -> Precise:
+        """Reception noise in `in_phase`: its one-sided power per Hz of audio, full scale = 1 (channels,)."""
+        return self.noise_density * self.noise_gain
 
     @property
     def quadrature(self) -> Real:

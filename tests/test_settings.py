@@ -12,7 +12,8 @@ from hypothesis import strategies as st
 from pydantic import ValidationError
 
 from monitord.errors import ConfigError
-from monitord.settings import Channel, Settings, Source, built_in, check_span, load, parse
+from monitord.settings import DETECTORS, Channel, Settings, Source, built_in, check_span, load, parse
+from monitord.settings.models import quoted
 
 CONFIG = Path(__file__).parent.parent / "config"
 
@@ -359,7 +360,8 @@ def test_a_topic_is_refused_where_it_has_no_meaning() -> None:
         ("loss_after_s = -1", "must be from 0 to 3600 s"),
         ('expect = "silence"', 'must be "carrier", "none" or "any"'),
         ('depth_reference = "absent"', 'must be "present" or "unmodulated"'),
-        ('detector = "rectifier"', 'must be one of the detectors of this version: "synchronous", "envelope"'),
+        ('detector = "magic"', f"must be one of the detectors of this version: {quoted(DETECTORS)}"),
+        ("time_constant_s = 0", "must be from 1e-06 to 0.1 s"),
         ("limits = 3", "must be a table"),
         ('limits = {hold_s = "x"}', "must be a number"),
         ("limits = {hold = 1}", "unknown key; did you mean hold_s?"),

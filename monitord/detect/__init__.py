@@ -3,10 +3,15 @@
 from collections.abc import Mapping
 
 from monitord.detect.envelope import EnvelopeDetector
+from monitord.detect.rectifier import RectifierDetector
+from monitord.detect.sideband import LowerSidebandDetector, UpperSidebandDetector
 from monitord.detect.synchronous import SynchronousDetector
 from monitord.stage import Detector
 
 DETECTORS: Mapping[str, type[Detector]] = {
     "synchronous": SynchronousDetector,
     "envelope": EnvelopeDetector,
+    "rectifier": RectifierDetector,
+    "upper-sideband": UpperSidebandDetector,
+    "lower-sideband": LowerSidebandDetector,
 }

@@ -40,7 +40,15 @@ InPhase = Callable[[Complex, Complex], Real]
 class CarrierRecovery:
     """Recovers the carriers of one bank."""
 
-    def __init__(self, bank: Bank) -> None:
+    def __init__(
+        self, bank: Bank, sideband: float = 0.0, noise_gain: float = 1.0, delay_s: float = 0.0
+    ) -> None:
+        """Make ready for a bank.
+
+        sideband: which one is detected, +1 the upper, -1 the lower, 0 both; noise_gain, delay_s: as in Detected.
+        """
+        self._sideband = sideband
+        self._noise_gain, self._delay_s = noise_gain, delay_s
         self._bank = bank
         first = bank.channels[0]
         rate_hz, frames = bank.rate_hz, bank.frames
@@ -91,7 +99,7 @@ class CarrierRecovery:
         samples, phase = self._rotate(baseband.samples, path)
         steps *= np.exp(-1j * (path[:, :-1] + path[:, 1:]) / 2)
         line = steps.mean(axis=1)
-        noise, disturbance = self._noise.density(samples.imag)
+        noise, disturbance = self._noise.density(samples, self._sideband)
         noise = with_floor(noise, np.abs(line))
         broken = self._breaks(steps.real)
         self._judge(line, np.square(np.abs(steps)).mean(axis=1), noise)
@@ -104,7 +112,7 @@ class CarrierRecovery:
         modulation = _modulation(samples, mean, noise * self._noise_hz)
         amplitude = self._reference.amplitude(mean, brief, modulation, settled & ~broken)
         spread = np.maximum(np.maximum(noise, disturbance), self._smooth_noise)
-        sigma = np.sqrt(spread * self._noise_hz) / amplitude
+        sigma = np.sqrt(spread * self._noise_gain * self._noise_hz) / amplitude
         hop_amplitude = np.where(self._tracking, np.abs(line), 0.0)
         recent_amplitude = (hop_amplitude + np.where(self._good > 1, self._last_hop, hop_amplitude)) / 2
         self._last_hop = hop_amplitude
@@ -130,9 +138,17 @@ class CarrierRecovery:
             locked=locked,
             settled=settled,
             broken=broken,
-            fading=self._fading.judge(samples, mean, modulation, noise),
+            noise_gain=self._noise_gain,
+            delay_s=self._delay_s,
+            fading=self._judge_fading(samples, mean, modulation, noise),
         )
         return replace(detected, second=self._seconds.take(detected))
+
+    def _judge_fading(self, samples: Complex, mean: Precise, modulation: Precise, noise: Precise) -> Flags:
+        """One sideband alone has as much in quadrature as in phase: that is no fading there."""
+        if self._sideband:
+            return np.zeros(self._channels, bool)
+        return self._fading.judge(samples, mean, modulation, noise)
 
     def _averaged_steps(self, samples: Complex) -> Steps:
         """The hop turned by the predicted phase and averaged over each step, complex128 (channels, STEPS)."""

@@ -7,7 +7,7 @@ the carrier, has the density of the reception noise. The median over the bins is
 import numpy as np
 import scipy.fft
 
-from monitord.blocks import Precise, Real
+from monitord.blocks import Complex, Precise, Real
 
 _CLEAR_OF_CARRIER_HZ = 100.0
 _QUARTERS = 4
@@ -27,16 +27,29 @@ class QuadratureNoise:
         power = float(np.sum(np.square(self._window, dtype=np.float64)))
         self._scale = 2 / (rate_hz * power * np.log(2))
 
-    def density(self, quadrature: Real) -> tuple[Precise, Precise]:
+    def density(self, samples: Complex, sideband: float = 0.0) -> tuple[Precise, Precise]:
         """Power per Hz of the complex baseband, full scale = 1, float64 (channels,): reception noise, and all there is.
 
         The first comes from medians over the bins; the second, their mean, has impulses and lines in it too.
-        quadrature: float32 (channels, frames), full scale = 1.
+        samples: turned to the carrier's phase, complex64 (channels, frames), full scale = 1; sideband: the one that is
+        detected, +1 or -1. Programme on one side alone stands in quadrature too: then the other side tells, where
+        it is the quieter, and nothing else can be told from programme.
         """
-        spectrum = scipy.fft.rfft(quadrature * self._window, axis=1)[:, self._bins]
+        spectrum = self._spectrum(samples.imag)
+        if sideband:
+            noise = self._reception(spectrum)
+            other = self._reception(self._spectrum(samples.real) - 1j * sideband * spectrum) / 2
+            return np.minimum(noise, other), np.zeros(len(noise))
         power = np.square(spectrum.real) + np.square(spectrum.imag)
         mean = power.mean(axis=1, dtype=np.float64) * (self._scale * np.log(2))
-        return np.asarray(_reception(power) * self._scale, np.float64), mean
+        return self._reception(spectrum), mean
+
+    def _spectrum(self, wave: Real) -> Complex:
+        return np.asarray(scipy.fft.rfft(wave * self._window, axis=1)[:, self._bins])
+
+    def _reception(self, spectrum: Complex) -> Precise:
+        power = np.square(spectrum.real) + np.square(spectrum.imag)
+        return np.asarray(_reception(power) * self._scale, np.float64)
 
 
 def _reception(power: Real) -> Real:

@@ -31,17 +31,16 @@ class Seconds:
         np.multiply(detected.coherent, scale, out=self._coherent[:, part])
         self._noise[place] = detected.noise_density
         self._usable[place] = detected.settled & ~detected.broken
-        return self._whole() if place == HOPS - 1 else None
+        return self._whole(detected.noise_gain) if place == HOPS - 1 else None
 
-    def _whole(self) -> Second:
+    def _whole(self, noise_gain: float) -> Second:
         usable = np.asarray(self._usable.all(axis=0))
         amplitude = _hann_mean(self._coherent.real)
         scale = (1 / np.where(usable, amplitude, np.nan)).astype(np.float32)[:, None]
         self._in_phase *= scale
         self._coherent *= scale
-        return Second(
-            self._in_phase, self._coherent, self._rate_hz, amplitude, self._noise.mean(axis=0), usable
-        )
+        noise = self._noise.mean(axis=0)
+        return Second(self._in_phase, self._coherent, self._rate_hz, amplitude, noise, usable, noise_gain)
 
 
 def _hann_mean(wave: Real) -> Precise:

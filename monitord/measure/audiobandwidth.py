@@ -77,7 +77,7 @@ class AudioBandwidthMeter:
         power = np.square(band.real) + np.square(band.imag)
         steps = power.reshape(len(power), self._steps, _STEP).mean(axis=2)
         cells = sum(steps[:, shift : shift + block.shape[1]] for shift in range(_CELL)) / _CELL
-        noise = _LINE_POWER * second.noise_density / np.square(second.amplitude) * second.bin_hz
+        noise = _LINE_POWER * second.audio_noise_density / np.square(second.amplitude) * second.bin_hz
         modulation = (power.sum(axis=1, dtype=np.float64) - noise * power.shape[1]) / _LINE_POWER
         loud = second.usable & (modulation > self._silent)
         counts = loud[:, None] & (cells > _CLEAR * noise[:, None])

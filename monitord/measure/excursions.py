@@ -101,7 +101,8 @@ class ExcursionMeter:
 
     def _time_s(self, detected: Detected, sample: NDArray[np.int64]) -> Precise:
         """Seconds since the stream began of samples of the hop's baseband (negative: of the hop before)."""
-        return np.asarray(detected.span.start / detected.span.rate_hz + sample / detected.rate_hz)
+        start_s = detected.span.start / detected.span.rate_hz - detected.delay_s
+        return np.asarray(start_s + sample / detected.rate_hz)
 
     def _below(self, detected: Detected, judged: Flags, clear: Precise) -> Mapping[str, Precise]:
         """Negative excursions in the troughs that ended within this hop."""

@@ -93,7 +93,7 @@ class FlatTopMeter:
     def process(self, detected: Detected) -> Mapping[str, Precise]:
         """See stage.Meter."""
         usable = detected.settled & ~detected.broken & peaks_mean_something(detected, self._bank)
-        noise = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
+        noise = detected.audio_noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         self._noise += np.where(usable, noise, 0)
         self._hops += usable
         if usable.any():

@@ -42,7 +42,7 @@ class SteadyTone:
         """Rows with a steady tone, and its frequency in Hz in each; each second must be shown, in order."""
         band = second.audio[:, self._band]
         power = np.square(band.real) + np.square(band.imag)
-        noise = LINE_POWER * second.noise_density / np.square(second.amplitude) * self._bin_hz
+        noise = LINE_POWER * second.audio_noise_density / np.square(second.amplitude) * self._bin_hz
         whole = power.sum(axis=1)
         peak = np.where(second.usable, power.argmax(axis=1), 0)
         line = np.take_along_axis(power, peak[:, None], axis=1)[:, 0]

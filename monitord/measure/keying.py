@@ -68,7 +68,7 @@ class ToneEnvelope:
 
         2 x 1.5 (Hann; Harris 1978, CHECKS E17) x its one-sided density over the carrier / length of the window.
         """
-        density = detected.noise_density / np.square(detected.amplitude)
+        density = detected.audio_noise_density / np.square(detected.amplitude)
         return density[self._rows] * (3 / (WINDOW_STEPS * self.step_s))
 
     def response(self, off_hz: Precise) -> Precise:

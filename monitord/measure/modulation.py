@@ -121,7 +121,7 @@ class ModulationMeter:
         highest, lowest, where = self._true.find()
         usable = detected.settled & ~detected.broken & ~detected.fading
         peaks = np.where(usable & peaks_mean_something(detected, self._bank), [highest, -lowest], np.nan)
-        noise_power = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
+        noise_power = detected.audio_noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         sigma = np.sqrt(noise_power)
         near = self._near_top(wave, highest, lowest, sigma)
         moving = np.abs(detected.brief_amplitude / detected.mean_amplitude - 1) > _MOVING

@@ -95,7 +95,7 @@ class PauseNoiseMeter:
             return
         in_phase = powers(second.audio[rows, self._band])
         quadrature = powers(second.quadrature[rows, self._band])
-        density = second.noise_density[rows] / np.square(second.amplitude[rows])
+        density = second.audio_noise_density[rows] / np.square(second.amplitude[rows])
         flat = self._bin_power * density[:, None]
         own_weights = self._weights - self._flat
         residue = in_phase @ self._weights - quadrature @ own_weights - flat * self._flat.sum(axis=0)

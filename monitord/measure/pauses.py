@@ -69,7 +69,7 @@ class PauseJudge:
 
     def find(self, second: Second) -> Pauses:
         """Judge one second; each second of the bank must be shown, in order."""
-        density = second.noise_density / np.square(second.amplitude)
+        density = second.audio_noise_density / np.square(second.amplitude)
         band = second.audio[:, self._band]
         parts = band.view(np.float32)
         power = np.einsum("cp,cp->c", parts, parts) / LINE_POWER - density * self._band_hz

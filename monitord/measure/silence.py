@@ -55,7 +55,7 @@ class SilenceMeter:
         usable = detected.settled & ~detected.broken
         wave = detected.in_phase - detected.in_phase.mean(axis=1, keepdims=True)
         power = np.einsum("cf,cf->c", wave, wave) / self._bank.frames
-        noise = detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude)
+        noise = detected.audio_noise_density * self._bank.noise_hz / np.square(detected.amplitude)
         self._power += np.where(usable, power, 0)
         self._noise += np.where(usable, noise, 0)
         self._hops += usable

@@ -198,7 +198,7 @@ class SteadyToneMeter:
         """Rows in which one line holds at least half of what is not reception noise."""
         band = second.audio[:, self._low : self._high + 1]
         power = np.square(band.real) + np.square(band.imag)
-        noise = _LINE_POWER * second.noise_density / np.square(second.amplitude) * second.bin_hz
+        noise = _LINE_POWER * second.audio_noise_density / np.square(second.amplitude) * second.bin_hz
         peak = np.where(second.usable, power.argmax(axis=1), 0)
         line = np.take_along_axis(power, peak[:, None], axis=1)[:, 0]
         rest = power.sum(axis=1, dtype=np.float64) - noise * band.shape[1]

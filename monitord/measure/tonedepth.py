@@ -198,7 +198,9 @@ class _KeyedTones:
         mean, square = np.where(off, self._waves[:, :, begin : begin + STEPS], 0).sum(axis=2)
         steps = off.sum(axis=1)
         use = steps >= _LEAST_STEPS
-        noise = (detected.noise_density * self._bank.noise_hz / np.square(detected.amplitude))[self._rows]
+        noise = (detected.audio_noise_density * self._bank.noise_hz / np.square(detected.amplitude))[
+            self._rows
+        ]
         variance = square - np.square(mean) / np.maximum(steps, 1) - noise * steps
         self._left += np.where(use, variance, 0)
         self._left_steps += np.where(use, steps, 0)

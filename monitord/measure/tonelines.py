@@ -38,7 +38,7 @@ class ToneLines:
         middle = np.where(plain, highest, self._hz / second.bin_hz)
         first, last = np.ceil(middle - width).astype(np.intp), np.floor(middle + width).astype(np.intp)
         power, inside = self._powers(second, first, last)
-        density = second.noise_density / np.square(second.amplitude)
+        density = second.audio_noise_density / np.square(second.amplitude)
         noise = _NOISE * second.bin_hz * density[self._rows] * inside.sum(axis=1)
         square = (np.where(inside, power, 0).sum(axis=1) - noise) / _HANN_POWER
         return np.where(second.usable[self._rows], square, np.nan)

@@ -18,7 +18,7 @@ from pydantic import (
     field_validator,
 )
 
-DETECTORS = ("synchronous", "envelope")
+DETECTORS = ("synchronous", "envelope", "rectifier", "upper-sideband", "lower-sideband")
 """Names of the detectors that this version has."""
 
 KINDS = ("socket", "recording", "simulated")
@@ -301,6 +301,7 @@ class ChannelKeys(_Section):
 
     bandwidth_hz: audio bandwidth measured, each side of the carrier.
     emission_bandwidth_hz: audio bandwidth that the station transmits; unless given, that of `bandwidth_hz`.
+    time_constant_s: RC of the rectifier detector.
     acquire_hz: how far off the carrier may be.
     loop_bandwidth_hz: noise bandwidth of the carrier loop.
     carrier_average_s: over how long the carrier's amplitude is averaged.
@@ -318,6 +319,7 @@ class ChannelKeys(_Section):
     bandwidth_hz: Annotated[float, _at_least(MIN_BANDWIDTH_HZ, "Hz")] = DEFAULT_BANDWIDTH_HZ
     emission_bandwidth_hz: float = Field(default=None, validate_default=True)
     detector: Annotated[str, AfterValidator(_detector)] = "synchronous"
+    time_constant_s: Annotated[float, _within(1e-6, 0.1, "s")] = 1e-4
     acquire_hz: Annotated[float, _at_least(0, "Hz")] = 100.0
     loop_bandwidth_hz: Annotated[float, _within(0.5, 20, "Hz")] = 5.0
     carrier_average_s: Annotated[float, _within(0.1, 10, "s")] = 1.0

@@ -20,7 +20,8 @@ from tests.runs import Kept
 
 SIZES = (1, 63, 64, 65, 8193)
 GAPS = (None, (5_000, 5_001), (4_999, 9_111))
-ARRAYS = [field.name for field in fields(Detected) if field.name not in ("rate_hz", "span", "second")]
+PLAIN = ("rate_hz", "span", "second", "noise_gain", "delay_s")
+ARRAYS = [field.name for field in fields(Detected) if field.name not in PLAIN]
 
 
 def through(size: int, gap: tuple[int, int] | None, samples: np.ndarray) -> Kept:

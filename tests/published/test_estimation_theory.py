@@ -126,7 +126,7 @@ def test_e17_the_noise_meter_allows_for_its_hann_window() -> None:
     rate_hz, frames, variance = 24_000.0, 2400, 0.003
     meter = QuadratureNoise(rate_hz, frames, 5_100.0)
     white = np.random.default_rng(17).standard_normal((300, frames)) * np.sqrt(variance)
-    median, mean = meter.density(white.astype(np.float32))
+    median, mean = meter.density(1j * white.astype(np.float32))
     assert np.mean(median) == pytest.approx(2 * variance / rate_hz, rel=0.02)
     assert np.mean(mean) == pytest.approx(2 * variance / rate_hz, rel=0.02)
 
