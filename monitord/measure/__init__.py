@@ -11,6 +11,7 @@ from monitord.measure.flattops import FlatTopMeter
 from monitord.measure.hum import HumMeter
 from monitord.measure.ident import IdentMeter
 from monitord.measure.incidentalphase import IncidentalPhaseMeter
+from monitord.measure.loudness import LoudnessMeter
 from monitord.measure.modulation import ModulationMeter
 from monitord.measure.pausenoise import PauseNoiseMeter
 from monitord.measure.sidebandbalance import SidebandBalanceMeter
@@ -39,6 +40,7 @@ METERS: tuple[type[Meter], ...] = (
     CarrierShiftMeter,
     PauseNoiseMeter,
     HumMeter,
+    LoudnessMeter,
 )
 
 

@@ -14,6 +14,7 @@ from monitord.blocks import Precise
 PREFIX = "monitord_"
 
 Numbers = NDArray[np.int64] | Precise
+Rows = slice | NDArray[np.intp]
 
 
 def escape(text: str) -> str:
@@ -83,3 +84,49 @@ class ChannelFamily:
         numbers = (flat.astype(np.int64) if self.whole else flat).tolist()
         lines = [f"{prefix}{number!r}\n" for prefix, number in zip(prefixes, numbers, strict=True)]
         return "".join(lines).encode()
+
+
+class HistogramFamily:
+    """A histogram for each channel and key of a second label; lines as of `ChannelFamily`."""
+
+    def __init__(
+        self,
+        name: str,
+        meaning: str,
+        channels: Sequence[str],
+        *,
+        label: str,
+        keys: Sequence[str],
+        bounds: Sequence[float],
+    ) -> None:
+        """Make the prefixes; `bounds`: upper bounds of the buckets, ascending, without +Inf."""
+        self.name = name
+        self.bounds = np.array(bounds)
+        self.shape = (len(channels), len(keys), len(bounds) + 2)
+        full = PREFIX + name
+        self._head = f"# HELP {full} {escape(meaning)}\n# TYPE {full} histogram\n".encode()
+        marks = [*(f"{bound:g}" if bound % 1 else f"{bound:.1f}" for bound in bounds), "+Inf"]
+        self._prefixes: list[str] = []
+        for channel, key in product(channels, keys):
+            labels = f'channel="{escape(channel)}",{label}="{escape(key)}"'
+            self._prefixes += [f'{full}_bucket{{{labels},le="{mark}"}} ' for mark in marks]
+            self._prefixes += [f"{full}_count{{{labels}}} ", f"{full}_sum{{{labels}}} "]
+
+    def observe(self, table: Precise, rows: Rows, values: Precise) -> None:
+        """Count values (channels, keys) in `table`, of `shape`: counts by bucket, and last the sum. NaN is no value."""
+        known = np.isfinite(values)
+        bucket = np.searchsorted(self.bounds, np.where(known, values, 0))
+        counted = (np.arange(len(self.bounds) + 1) == bucket[:, :, None]) & known[:, :, None]
+        table[rows, :, :-1] += counted
+        table[rows, :, -1] += np.where(known, values, 0)
+
+    def text(self, table: Precise) -> bytes:
+        """Write the family, its buckets cumulative."""
+        counts = np.cumsum(table[:, :, :-1], axis=2).astype(np.int64)
+        lines = []
+        prefixes = iter(self._prefixes)
+        sums = table[:, :, -1].ravel().tolist()
+        for row, total in zip(counts.reshape(-1, counts.shape[2]).tolist(), sums, strict=True):
+            lines += [f"{next(prefixes)}{count}\n" for count in row]
+            lines += [f"{next(prefixes)}{row[-1]}\n", f"{next(prefixes)}{total!r}\n"]
+        return self._head + "".join(lines).encode()

@@ -5,12 +5,11 @@ import time
 from collections.abc import Sequence
 
 import numpy as np
-from numpy.typing import NDArray
 
 from monitord.blocks import FAULT_NAMES, Event, Fault, Moment, Precise, Reading
 from monitord.notice.kinds import CHANNEL_KINDS, SOURCE_ALARMS, SOURCE_KINDS
 from monitord.publish.daemon import END, DaemonFamilies
-from monitord.publish.families import ChannelFamily, Numbers
+from monitord.publish.families import ChannelFamily, HistogramFamily, Numbers, Rows
 from monitord.publish.tally import Tally
 from monitord.quantities import Quantity
 
@@ -21,7 +20,9 @@ POLARITIES = ("negative", "positive")
 _FAULT_BITS = np.array([int(fault) for fault in Fault], np.uint32)
 _OVERMODULATION = {f"overmodulation-{polarity}": row for row, polarity in enumerate(POLARITIES)}
 
-Rows = slice | NDArray[np.intp]
+
+SLOT_PEAKS = (*(tenth / 10 for tenth in range(1, 10)), 0.95, 1.0, 1.05, 1.1, 1.25, 1.5)
+"""Upper bounds of the histogram of slot peaks, ratios: finer where the limits are."""
 
 
 def _state_families(channels: Sequence[str]) -> tuple[ChannelFamily, ...]:
@@ -81,6 +82,15 @@ class MetricsPage:
         # What a moment says at once is not said again, later, by the reading.
         own = [quantity for quantity in quantities if quantity.name not in self._table]
         self._quantities = tuple((quantity, _family(quantity, self._channels)) for quantity in own)
+        self._slot_peaks = HistogramFamily(
+            "modulation_slot_peak_ratio",
+            "Peaks of the modulation in each 0.1 s, less what noise lifts them.",
+            self._channels,
+            label="polarity",
+            keys=POLARITIES,
+            bounds=SLOT_PEAKS,
+        )
+        self._slots = np.zeros(self._slot_peaks.shape)
         self._reading: Reading | None = None
         self._open: dict[int, Event] = {}
         self._daemon = DaemonFamilies(tally, version)
@@ -93,6 +103,8 @@ class MetricsPage:
         """Take one hop."""
         rows = self._rows(moment.channels)
         over_s = np.nan_to_num(np.column_stack((moment.over_negative_s, moment.over_positive_s)))
+        trusted = (moment.faults == 0)[:, np.newaxis]
+        peaks = np.where(trusted, np.column_stack((moment.negative_peak, moment.positive_peak)), np.nan)
         hop_s = (moment.span.end - moment.span.start) / moment.span.rate_hz
         table = self._table
         with self._lock:
@@ -101,6 +113,7 @@ class MetricsPage:
                 moment.present < 0, table["carrier_present"][rows], moment.present == 1
             )
             table["carrier_loop_locked"][rows] = moment.locked
+            self._slot_peaks.observe(self._slots, rows, peaks)
             table["overmodulation_seconds_total"][rows] += over_s
             table["carrier_absent_seconds_total"][rows] += hop_s * (moment.present == 0)
 
@@ -157,6 +170,7 @@ class MetricsPage:
     def _write(self, openmetrics: bool) -> bytes:
         with self._lock:
             table = {name: values.copy() for name, values in self._table.items()}
+            slots = self._slots.copy()
             reading = self._reading
             lost = self._daemon.lost
         # Outside the lock: it reads files of the process, and the chain must not wait for that.
@@ -166,6 +180,7 @@ class MetricsPage:
         parts += [family.text(table[family.name], openmetrics) for family in states]
         for quantity, family in self._quantities:
             parts.append(family.text(self._values(quantity, family, reading, lost), openmetrics))
+        parts.append(self._slot_peaks.text(slots))
         if openmetrics:
             parts.append(END)
         return b"".join(parts)

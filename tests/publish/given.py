@@ -38,6 +38,9 @@ def moment(
     locked: Sequence[bool] | bool = True,
     over_negative_s: Sequence[float] | float = 0.0,
     over_positive_s: Sequence[float] | float = 0.0,
+    positive_peak: Sequence[float] | float = 0.5,
+    negative_peak: Sequence[float] | float = 0.5,
+    faults: Sequence[int] | int = 0,
     index: int = 0,
 ) -> Moment:
     """A hop of 0.1 s."""
@@ -54,14 +57,14 @@ def moment(
         present=each(present).astype(np.int8),
         locked=each(locked).astype(bool),
         settled=each(locked).astype(bool),
-        positive_peak=each(0.5),
-        negative_peak=each(0.5),
+        positive_peak=each(positive_peak),
+        negative_peak=each(negative_peak),
         over_positive_s=each(over_positive_s),
         over_negative_s=each(over_negative_s),
         over_positive_span_s=nothing,
         over_negative_span_s=nothing,
         cut_off=np.zeros(count, bool),
-        faults=np.zeros(count, np.uint32),
+        faults=each(faults).astype(np.uint32),
     )
 
 

@@ -88,33 +88,41 @@ def test_a_young_page_is_served_again_and_an_older_one_is_not() -> None:
 def test_pages_stay_whole_while_the_chain_goes_on() -> None:
     """Peak and level of one reading are equal: a page that mixes two readings would show it."""
     page = make_page()
-    done = threading.Event()
+    enough, read, told = threading.Event(), threading.Event(), []
 
     def chain() -> None:
-        for index in range(300):
+        while not enough.is_set():
+            index = len(told)
             values = [float(index), float(index)]
             page.moment(moment(index=index))
             page.reading(
                 reading({"carrier_level_dbfs": values, "modulation_negative_peak_ratio": values}, index=index)
             )
             page.event(event(index, "carrier-loss", ended_s=13.0))
-        done.set()
+            told.append(index)
+            if index % 10 == 9:  # or the pages would never get their turn
+                read.wait()
+                read.clear()
 
     worker = threading.Thread(target=chain)
     worker.start()
-    seen = 0
-    while not done.is_set():
-        families = {
-            family.name: family.samples
-            for family in parser.text_string_to_metric_families(page.render(False).decode())
-        }
-        levels = [sample.value for sample in families.get("monitord_carrier_level_dbfs", [])]
-        peaks = [sample.value for sample in families.get("monitord_modulation_negative_peak_ratio", [])]
-        assert levels == peaks
-        seen += bool(levels)
-    worker.join()
-    assert seen
-    assert samples(page)["carrier_loss_events_total", "mw-936"] == 300
+    seen = set()
+    try:
+        while len(seen) < 4:
+            families = {
+                family.name: family.samples
+                for family in parser.text_string_to_metric_families(page.render(False).decode())
+            }
+            levels = [sample.value for sample in families.get("monitord_carrier_level_dbfs", [])]
+            peaks = [sample.value for sample in families.get("monitord_modulation_negative_peak_ratio", [])]
+            assert levels == peaks
+            seen.update(levels)
+            read.set()
+    finally:
+        enough.set()
+        read.set()
+        worker.join()
+    assert samples(page)["carrier_loss_events_total", "mw-936"] == len(told)
 
 
 def test_the_lines_of_120_channels_cost_less_than_a_general_writer() -> None:
@@ -148,3 +156,24 @@ def test_the_lines_of_120_channels_cost_less_than_a_general_writer() -> None:
     general = fastest(lambda: openmetrics.exposition.generate_latest(Parsed()))
     print(f"120 channels: {1e3 * ours:.1f} ms, general writer {1e3 * general:.1f} ms")
     assert ours < general / 2
+
+
+def test_slot_peaks_are_a_histogram_from_the_first_scrape_on() -> None:
+    page = MetricsPage(CHANNELS, QUANTITIES, full_tally(), "0.1.0", renewal_s=0.0)
+    name = "monitord_modulation_slot_peak_ratio"
+    first = page.render(openmetrics=False).decode()
+    assert f'{name}_count{{channel="mw-936",polarity="negative"}} 0' in first
+    page.moment(moment(index=0, negative_peak=[0.97, np.nan], positive_peak=[1.3, np.nan]))
+    page.moment(moment(index=1, negative_peak=[0.5, np.nan], positive_peak=[0.4, np.nan]))
+    page.moment(moment(index=2, negative_peak=[2.0, np.nan], positive_peak=[2.0, np.nan], faults=[1, 0]))
+    for form in (False, True):
+        lines = dict(line.rsplit(" ", 1) for line in page.render(form).decode().splitlines() if name in line)
+        of = 'channel="mw-936",polarity="negative"'
+        assert lines[f'{name}_bucket{{{of},le="0.5"}}'] == "1"
+        assert lines[f'{name}_bucket{{{of},le="0.95"}}'] == "1"
+        assert lines[f'{name}_bucket{{{of},le="1.0"}}'] == "2"
+        assert lines[f'{name}_bucket{{{of},le="+Inf"}}'] == "2"
+        assert lines[f"{name}_count{{{of}}}"] == "2"
+        assert float(lines[f"{name}_sum{{{of}}}"]) == pytest.approx(1.47)
+        other = 'channel="lw-153",polarity="positive"'
+        assert lines[f"{name}_count{{{other}}}"] == "0"
