@@ -11,6 +11,7 @@ from monitord.measure.flattops import FlatTopMeter
 from monitord.measure.hum import HumMeter
 from monitord.measure.ident import IdentMeter
 from monitord.measure.incidentalphase import IncidentalPhaseMeter
+from monitord.measure.interference import InterferenceMeter
 from monitord.measure.loudness import LoudnessMeter
 from monitord.measure.modulation import ModulationMeter
 from monitord.measure.pausenoise import PauseNoiseMeter
@@ -41,6 +42,7 @@ METERS: tuple[type[Meter], ...] = (
     PauseNoiseMeter,
     HumMeter,
     LoudnessMeter,
+    InterferenceMeter,
 )
 
 
