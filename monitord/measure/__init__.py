@@ -8,13 +8,17 @@ from monitord.measure.carriershift import CarrierShiftMeter
 from monitord.measure.disagreement import DisagreementMeter
 from monitord.measure.excursions import ExcursionMeter
 from monitord.measure.flattops import FlatTopMeter
+from monitord.measure.gainchange import GainChangeMeter
 from monitord.measure.hum import HumMeter
 from monitord.measure.ident import IdentMeter
 from monitord.measure.incidentalphase import IncidentalPhaseMeter
 from monitord.measure.interference import InterferenceMeter
 from monitord.measure.loudness import LoudnessMeter
+from monitord.measure.mask import EmissionMaskMeter
 from monitord.measure.modulation import ModulationMeter
+from monitord.measure.occupied import OccupiedBandwidthMeter
 from monitord.measure.pausenoise import PauseNoiseMeter
+from monitord.measure.quadraturesignal import QuadratureSignalMeter
 from monitord.measure.sidebandbalance import SidebandBalanceMeter
 from monitord.measure.signaltonoise import SignalToNoiseMeter
 from monitord.measure.silence import SilenceMeter
@@ -43,6 +47,10 @@ METERS: tuple[type[Meter], ...] = (
     HumMeter,
     LoudnessMeter,
     InterferenceMeter,
+    QuadratureSignalMeter,
+    GainChangeMeter,
+    OccupiedBandwidthMeter,
+    EmissionMaskMeter,
 )
 
 

@@ -33,6 +33,7 @@ from monitord.settings.models import (
     Raster,
     Settings,
     Source,
+    Spectrum,
     Station,
     Tone,
 )
@@ -47,6 +48,7 @@ __all__ = [
     "Limits",
     "Settings",
     "Source",
+    "Spectrum",
     "Station",
     "Tone",
     "built_in",

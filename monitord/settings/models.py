@@ -3,6 +3,7 @@
 Each value is checked by itself here; what depends on two values is checked in checks.py.
 """
 
+import itertools
 import os
 import re
 import socket
@@ -40,6 +41,7 @@ NAME_RULE = "1 to 64 letters, digits, dots, hyphens and underscores, the first a
 BUILT_IN_RATE_HZ = 48_000.0
 MIN_RATE_HZ, MAX_RATE_HZ = 1_000.0, 50e6
 MIN_BANDWIDTH_HZ = 100.0
+CFR_MASK = "47-cfr-73.44"
 DEFAULT_BANDWIDTH_HZ = 5_000.0
 CONTROLLED_AVERAGE_S = 0.1
 
@@ -296,6 +298,43 @@ def _tones(value: tuple[Tone, ...]) -> tuple[Tone, ...]:
     return value
 
 
+Points = tuple[tuple[float, float], ...]
+
+
+def _mask(value: object) -> object:
+    """Breakpoints as pairs of floats, ascending, or the name of a mask."""
+    if value is None or value == CFR_MASK:
+        return value
+    wrong = f'must be "{CFR_MASK}" or breakpoints [[offset_hz, attenuation_db], ...], two or more, offsets ascending'
+    if not isinstance(value, list | tuple) or len(value) < 2:
+        raise ValueError(wrong)
+    points = []
+    for pair in value:
+        good = isinstance(pair, list | tuple) and len(pair) == 2
+        if not good or not all(isinstance(one, int | float) and not isinstance(one, bool) for one in pair):
+            raise ValueError(wrong)
+        points.append((float(pair[0]), float(pair[1])))
+    offsets = [offset for offset, _ in points]
+    if offsets[0] < 0 or any(low > high for low, high in itertools.pairwise(offsets)):
+        raise ValueError(wrong)
+    return tuple(points)
+
+
+class Spectrum(_Section):
+    """What of a transmitter's emission is measured; meant for a sample of the transmitter, not for reception.
+
+    mask: limits of the emission, "47-cfr-73.44" or breakpoints (offset_hz, attenuation_db); None: no mask.
+    power_w: of the transmitter, for the limit beyond 75 kHz of "47-cfr-73.44".
+    resolution_hz: noise bandwidth in which the emission is compared with the mask.
+    hold_s: for how long the highest levels are held.
+    """
+
+    mask: Annotated[Points | Literal["47-cfr-73.44"] | None, BeforeValidator(_mask)] = None
+    power_w: Annotated[float, _above(0, 10_000_000, "W")] = 50_000.0
+    resolution_hz: Annotated[float, _within(100, 3000, "Hz")] = 300.0
+    hold_s: Annotated[float, _within(1, 3600, "s")] = 600.0
+
+
 class ChannelKeys(_Section):
     """What a channel and a raster of channels share. Frequencies in Hz, times in s, levels in dBFS.
 
@@ -312,6 +351,7 @@ class ChannelKeys(_Section):
     expect: a "carrier" is expected here, "none", or "any" (neither alarms).
     tone: the tones whose depth is measured.
     ident: the ident that is to be heard; None: none is.
+    spectrum: what of the emission is measured; None: nothing.
     silence_db: rms of the modulation below which a channel is silent, re a sine of 100 %.
     mains_hz: mains frequency at the transmitter, for its hum: 50, 60, or "found" (whichever fits).
     """
@@ -335,6 +375,7 @@ class ChannelKeys(_Section):
     limits: Limits = Limits()
     tone: Annotated[tuple[Tone, ...], Field(strict=False), AfterValidator(_tones)] = ()
     ident: Ident | None = None
+    spectrum: Spectrum | None = None
 
     @property
     def averaging_s(self) -> float:
