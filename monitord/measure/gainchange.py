@@ -8,8 +8,8 @@ from monitord.blocks import Detected, Fault, Precise
 from monitord.quantities import Quantity
 from monitord.stage import Bank
 
-_SIDE_HOPS = 3  # on each side of the step
-_STEP_DB = 1.5  # the noise of three hops scatters by 0.2 dB
+_SIDE_HOPS = 5  # on each side of the step; by their median, so that a carrier keyed down for 0.2 s is none
+_STEP_DB = 1.5  # the noise of five hops scatters by 0.2 dB
 _ALIKE_DB = 1.0
 _MOST_C_N0_DB = 130.0  # above, what looks like noise is that of the arithmetic, and moves with the carrier
 _STANDS_HOPS = 10  # for as long as levels and means straddle the step
