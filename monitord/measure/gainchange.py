@@ -8,10 +8,11 @@ from monitord.blocks import Detected, Fault, Precise
 from monitord.quantities import Quantity
 from monitord.stage import Bank
 
-_SIDE_HOPS = 5  # on each side of the step; by their median, so that a carrier keyed down for 0.2 s is none
+_SIDE_HOPS = 5  # on each side of the step; by their median
 _STEP_DB = 1.5  # the noise of five hops scatters by 0.2 dB
 _ALIKE_DB = 1.0
 _MOST_C_N0_DB = 130.0  # above, what looks like noise is that of the arithmetic, and moves with the carrier
+_MOST_ASIDE = 2.0  # of the noise's power in quadrature: with more there, it is not the noise that is measured
 _STANDS_HOPS = 10  # for as long as levels and means straddle the step
 
 
@@ -23,6 +24,7 @@ class GainChangeMeter:
     def prepare(self, bank: Bank) -> None:
         """See stage.Meter."""
         self._channels = len(bank.channels)
+        self._noise_hz = bank.noise_hz
         self.reset()
 
     def reset(self) -> None:
@@ -35,7 +37,10 @@ class GainChangeMeter:
     def process(self, detected: Detected) -> Mapping[str, Precise]:
         """See stage.Meter."""
         carrier, noise = np.square(detected.hop_amplitude), detected.noise_density
-        known = detected.settled & ~detected.broken & (carrier < 10 ** (_MOST_C_N0_DB / 10) * noise)
+        wave = detected.quadrature
+        aside = np.einsum("cf,cf->c", wave, wave) / wave.shape[1] * np.square(detected.amplitude)
+        known = detected.settled & ~detected.broken & (aside < _MOST_ASIDE * noise * self._noise_hz)
+        known &= carrier < 10 ** (_MOST_C_N0_DB / 10) * noise
         pair = 10 * np.log10(np.where(known, [carrier, noise], 1))
         self._power_db[:, :-1] = self._power_db[:, 1:]
         self._power_db[:, -1] = np.where(known, pair, np.nan)
