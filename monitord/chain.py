@@ -87,6 +87,7 @@ def banks_of(channels: Sequence[Channel]) -> list[list[Channel]]:
     for channel in channels:
         key = (
             channel.detector,
+            channel.sideband,
             channel.bandwidth_hz,
             channel.acquire_hz,
             channel.loop_bandwidth_hz,

@@ -5,6 +5,7 @@ from collections.abc import Mapping
 from monitord.detect.envelope import EnvelopeDetector
 from monitord.detect.rectifier import RectifierDetector
 from monitord.detect.sideband import LowerSidebandDetector, UpperSidebandDetector
+from monitord.detect.suppressed import SuppressedCarrierDetector
 from monitord.detect.synchronous import SynchronousDetector
 from monitord.stage import Detector
 
@@ -14,4 +15,5 @@ DETECTORS: Mapping[str, type[Detector]] = {
     "rectifier": RectifierDetector,
     "upper-sideband": UpperSidebandDetector,
     "lower-sideband": LowerSidebandDetector,
+    "suppressed-carrier": SuppressedCarrierDetector,
 }

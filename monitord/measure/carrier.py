@@ -58,6 +58,7 @@ class CarrierMeter:
     def prepare(self, bank: Bank) -> None:
         """See stage.Meter."""
         self._bank = bank
+        self._carrierless = np.array([one.carrierless for one in bank.channels])
         self._average_hops = max(1, round(bank.channels[0].averaging_s / bank.hop_s))
         self.reset()
 
@@ -76,7 +77,7 @@ class CarrierMeter:
         amplitude = detected.hop_amplitude
         level = np.full(amplitude.shape, -np.inf)
         np.log10(amplitude, out=level, where=amplitude > 0)
-        return {"level_dbfs": 20 * level, "present": self._presence.state.astype(np.float64)}
+        return {"level_dbfs": 20 * level, "present": np.where(self._carrierless, -1.0, self._presence.state)}
 
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
@@ -85,7 +86,10 @@ class CarrierMeter:
         state = self._presence.state
         locked = hops[-1].locked
         level = np.where((state == 1) & locked, self._level_dbfs(hops), np.nan)
-        steady = np.all([hop.locked & ~hop.broken for hop in hops], axis=0) & (state == 1)
+        state = np.where(self._carrierless, -1, state)
+        steady = (
+            ~self._carrierless & np.all([hop.locked & ~hop.broken for hop in hops], axis=0) & (state == 1)
+        )
         if not self._bank.fixed_gain:
             level = np.full(level.shape, np.nan)
         offset_hz, scatter_hz = _slope_hz(hops, steady)

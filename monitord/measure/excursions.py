@@ -57,6 +57,7 @@ class ExcursionMeter:
         self._bank = bank
         self._negative = np.array([channel.limits.negative_peak for channel in bank.channels])
         self._positive = np.array([channel.limits.positive_peak for channel in bank.channels])
+        self._judged = np.array([not one.carrierless for one in bank.channels])  # else scaled to its own peak
         self._follows = np.array([one.depth_reference == "present" for one in bank.channels])
         self._keep = min(bank.frames, round(_LONGEST_S * bank.rate_hz) + 2)
         self._resolution = bank.rate_hz / bank.noise_hz  # samples: nothing shorter can be flat
@@ -74,7 +75,9 @@ class ExcursionMeter:
 
     def process(self, detected: Detected) -> Mapping[str, Precise]:
         """See stage.Meter."""
-        usable = detected.settled & ~detected.broken & peaks_mean_something(detected, self._bank)
+        usable = (
+            self._judged & detected.settled & ~detected.broken & peaks_mean_something(detected, self._bank)
+        )
         usable &= detected.hop_amplitude < _LEAP * (2 * detected.recent_amplitude - detected.hop_amplitude)
         judged, self._usable = usable & self._usable, usable  # a trough may have begun in the hop before
         clear = np.maximum(CLEAR_SIGMA * detected.sigma, _CLEAR_LEAST)

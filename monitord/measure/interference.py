@@ -200,6 +200,9 @@ class InterferenceMeter:
     def prepare(self, bank: Bank) -> None:
         """See stage.Meter."""
         self._bank = bank
+        # One sideband alone looks like another carrier, and so does each tone of it.
+        one = bank.channels[0]
+        self._one_sided = one.detector.endswith("sideband") or one.carrierless
         self.reset()
 
     def reset(self) -> None:
@@ -216,7 +219,7 @@ class InterferenceMeter:
         far = self._averaged.take(detected.second) if detected.second is not None else None
         near = self._near.take(detected)
         self._far_lines, self._near_lines = far or self._far_lines, near or self._near_lines
-        if far or near:
+        if (far or near) and not self._one_sided:
             self._strong = np.nanmax(np.nan_to_num(self._strongest()[1]), axis=1) > 10 ** (_FAULT_DB / 20)
         return {"faults": np.where(self._strong & detected.locked, int(Fault.INTERFERENCE), 0)}
 
@@ -235,7 +238,7 @@ class InterferenceMeter:
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
         offset_hz, amplitude = self._strongest()
-        there = self._locked[:, None] & np.isfinite(amplitude)
+        there = ~np.array(self._one_sided) & self._locked[:, None] & np.isfinite(amplitude)
         level_db = 20 * np.log10(np.where(there, amplitude, 1))
         return {
             "interferer_offset_hertz": np.where(there, offset_hz, np.nan),

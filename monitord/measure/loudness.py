@@ -81,10 +81,12 @@ class LoudnessMeter:
     def _begin(self) -> None:
         self._momentary = np.full(len(self._rows), -np.inf)
         self._short_term = np.full(len(self._rows), -np.inf)
+        self._heard = np.zeros(len(self._rows), bool)
 
     def process(self, detected: Detected) -> Mapping[str, Precise]:
         """See stage.Meter."""
         usable = detected.settled & ~detected.broken
+        self._heard |= usable
         wave = np.where(usable[:, None], detected.in_phase - 1, np.float32(0))
         weighted = self._filter.filter(wave)
         noise = detected.audio_noise_density / np.square(detected.amplitude) * self._noise_hz
@@ -121,11 +123,12 @@ class LoudnessMeter:
     def reading(self) -> Mapping[str, Precise]:
         """See stage.Meter."""
         momentary, short_term = lufs(np.stack([self._momentary, self._short_term]))
+        integrated = np.where(self._heard, self._integrated(), np.nan)
         self._begin()
         return {
             "audio_loudness_momentary_lufs": _told(momentary),
             "audio_loudness_short_term_lufs": _told(short_term),
-            "audio_loudness_integrated_lufs": self._integrated(),
+            "audio_loudness_integrated_lufs": integrated,
         }
 
     def _integrated(self) -> Precise:

@@ -27,7 +27,8 @@ class QuadratureSignalMeter:
     def prepare(self, bank: Bank) -> None:
         """See stage.Meter."""
         self._channels = len(bank.channels)
-        self._one_sideband = bank.channels[0].detector.endswith("sideband")  # its audio is in quadrature too
+        # There the audio itself is in quadrature too.
+        self._one_sideband = bank.channels[0].detector.endswith(("sideband", "suppressed-carrier"))
         self._bands = Bands(bank)
         self.reset()
 

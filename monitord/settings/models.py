@@ -19,7 +19,10 @@ from pydantic import (
     field_validator,
 )
 
-DETECTORS = ("synchronous", "envelope", "rectifier", "upper-sideband", "lower-sideband")
+DETECTORS = (
+    *("synchronous", "envelope", "rectifier"),
+    *("upper-sideband", "lower-sideband", "suppressed-carrier"),
+)
 """Names of the detectors that this version has."""
 
 KINDS = ("socket", "recording", "simulated")
@@ -340,6 +343,7 @@ class ChannelKeys(_Section):
 
     bandwidth_hz: audio bandwidth measured, each side of the carrier.
     emission_bandwidth_hz: audio bandwidth that the station transmits; unless given, that of `bandwidth_hz`.
+    sideband: of the detector "suppressed-carrier": "both", or the one that is transmitted.
     time_constant_s: RC of the rectifier detector.
     acquire_hz: how far off the carrier may be.
     loop_bandwidth_hz: noise bandwidth of the carrier loop.
@@ -359,6 +363,7 @@ class ChannelKeys(_Section):
     bandwidth_hz: Annotated[float, _at_least(MIN_BANDWIDTH_HZ, "Hz")] = DEFAULT_BANDWIDTH_HZ
     emission_bandwidth_hz: float = Field(default=None, validate_default=True)
     detector: Annotated[str, AfterValidator(_detector)] = "synchronous"
+    sideband: Literal["both", "upper", "lower"] = "both"
     time_constant_s: Annotated[float, _within(1e-6, 0.1, "s")] = 1e-4
     acquire_hz: Annotated[float, _at_least(0, "Hz")] = 100.0
     loop_bandwidth_hz: Annotated[float, _within(0.5, 20, "Hz")] = 5.0
@@ -376,6 +381,11 @@ class ChannelKeys(_Section):
     tone: Annotated[tuple[Tone, ...], Field(strict=False), AfterValidator(_tones)] = ()
     ident: Ident | None = None
     spectrum: Spectrum | None = None
+
+    @property
+    def carrierless(self) -> bool:
+        """There is no carrier to be measured."""
+        return self.detector == "suppressed-carrier"
 
     @property
     def averaging_s(self) -> float:
