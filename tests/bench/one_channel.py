@@ -1,4 +1,4 @@
-"""One channel at 48 kHz: load and memory of the live daemon, and the chain's time over that of its bare FFTs.
+"""One channel at 48 kHz: load and memory of the live daemon, the chain's time over its bare FFTs, each meter's share.
 
 python -m tests.bench.one_channel
 """
@@ -12,19 +12,22 @@ from pathlib import Path
 import numpy as np
 import scipy.fft
 
-from monitord.blocks import Block
+from monitord.blocks import Baseband, Block, Span
 from monitord.chain import Chain, Stream
 from monitord.condition.grid import Branch, Grid
+from monitord.detect import DETECTORS
 from monitord.measure import METERS
 from monitord.notice import RULES
 from monitord.publish.tally import Tally
 from monitord.settings import Channel
 from tests.station import daemon, publisher, send_in_real_time, subscribed
+from tests.trials import bank_of, received, tones
 
 RATE_HZ = 48_000
 CARRIER_HZ = 12_000.0
 LIVE_S = 20.0
 HOPS = 600
+SHARE_HOPS = 200
 
 SETTINGS = """
 [source]
@@ -106,6 +109,37 @@ def ratio() -> None:
         print(f"  {stage:12s}                              {seconds / floor:8.1f}")
 
 
+def shares(rows: int) -> None:
+    """What each meter takes of the time of all, and all meters of the time of detection, for a bank of `rows`."""
+    bank = bank_of(rows)
+    rng = np.random.default_rng(1)
+    wave = received(bank, tones(bank, SHARE_HOPS, 0.6, rng), np.full(rows, 3.0), 90.0, rng)
+    detector = DETECTORS["synchronous"]()
+    detector.prepare(bank)
+    meters = [make() for make in METERS]
+    for meter in meters:
+        meter.prepare(bank)
+    spent, detecting = dict.fromkeys((type(meter).__name__ for meter in meters), 0.0), 0.0
+    for index in range(SHARE_HOPS):
+        part = wave[:, index * bank.frames : (index + 1) * bank.frames]
+        span = Span(index, index * 4800, (index + 1) * 4800, RATE_HZ, None, index == 0)
+        begin = time.process_time()
+        detected = detector.process(Baseband(part, bank.rate_hz, span))
+        detecting += time.process_time() - begin
+        for meter in meters:
+            begin = time.process_time()
+            meter.process(detected)
+            if index % 10 == 9:
+                meter.reading()
+            spent[type(meter).__name__] += time.process_time() - begin
+    whole = sum(spent.values())
+    print(f"{rows} channels of a tone: all meters over detection {whole / detecting:8.1f}")
+    for name, seconds in sorted(spent.items(), key=lambda item: -item[1]):
+        print(f"  {name:24s} {100 * seconds / whole:6.1f} % of the meters' time")
+
+
 if __name__ == "__main__":
     live()
     ratio()
+    shares(1)
+    shares(60)
