@@ -5,6 +5,7 @@ from collections.abc import Mapping
 import numpy as np
 
 from monitord.blocks import Detected, Flags, Precise, Second
+from monitord.measure.hannline import between_bins
 from monitord.measure.mainslines import MainsLines, Rows
 from monitord.measure.pauses import (
     FULL_POWER,
@@ -49,8 +50,9 @@ class SteadyTone:
         # The highest bin of a Hann line holds half of its power at least, and 0.7 of its amplitude squared.
         rows = np.flatnonzero(second.usable & (line > 0.7 * LEAST_TONE**2) & (line > 0.3 * whole))
         rows = rows[(peak[rows] > 0) & (peak[rows] < power.shape[1] - 1)]
-        place, amplitude = _interpolated(power, rows, peak[rows])
-        place = place + self._place[0]
+        around = np.sqrt(power[rows[:, None], peak[rows][:, None] + np.array([-1, 0, 1])])
+        away, amplitude = between_bins(*around.T)
+        place = peak[rows] + away + self._place[0]
         others = (self._others(powers(band[rows]), place) - noise[rows] * band.shape[1]) / LINE_POWER
         steady = self._as_before(rows, place, amplitude) & (others < PAUSE_POWER)
         self._last[:] = np.nan
@@ -67,15 +69,6 @@ class SteadyTone:
         last_place, last_amplitude = self._last[:, rows]
         same = np.abs(place - last_place) < _DRIFT_BINS
         return np.asarray(same & (np.abs(amplitude / last_amplitude - 1) < _SWELL))
-
-
-def _interpolated(power: Precise, rows: Rows, peak: Rows) -> tuple[Precise, Precise]:
-    """Place of a Hann line in bins, and its amplitude (Rife and Vincent 1970: (2 r - 1) / (r + 1))."""
-    below, here, above = np.sqrt(power[rows[:, None], peak[:, None] + np.array([-1, 0, 1])]).T
-    ratio = np.maximum(below, above) / here
-    away = np.clip((2 * ratio - 1) / (ratio + 1), 0, 0.5)
-    shape = np.sinc(away) / (1 - np.square(away))
-    return peak + np.where(above > below, away, -away), here / shape
 
 
 class HumMeter:

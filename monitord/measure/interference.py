@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from monitord.blocks import Complex, Detected, Fault, Flags, Precise, Second, hann
 from monitord.detect.loop import ZETA, natural_frequency
+from monitord.measure.hannline import between_bins
 from monitord.quantities import Quantity
 from monitord.stage import Bank
 
@@ -81,12 +82,10 @@ def lines(spectra: _Spectra, count: Precise, bin_hz: float, clear: float) -> tup
     row = np.arange(rows)[:, None]
     found = candidates[row, best] > 0
     place = best + 1
-    low, mid, high = (np.sqrt(np.maximum(power[row, place + k], 1e-30)) for k in (-1, 0, 1))
-    ratio = np.maximum(low, high) / mid
-    away = np.clip((2 * ratio - 1) / (ratio + 1), 0, 0.5)  # Rife and Vincent 1970, Hann window
-    amplitude = mid * (1 - np.square(away)) / np.sinc(away)
+    below, highest, above = (np.sqrt(np.maximum(power[row, place + k], 1e-30)) for k in (-1, 0, 1))
+    away, amplitude = between_bins(below, highest, above)
     side = np.where(spectra.cross.imag[row, place] < 0, 1.0, -1.0)
-    offset_hz = side * (place + np.where(high > low, away, -away)) * bin_hz
+    offset_hz = side * (place + away) * bin_hz
     return np.where(found, offset_hz, np.nan), np.where(found, amplitude, np.nan)
 
 

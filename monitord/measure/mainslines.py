@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from monitord.blocks import Complex, Flags, Precise
+from monitord.measure.hannline import line_shape
 from monitord.settings import Channel
 
 Rows = NDArray[np.int64]
@@ -30,11 +31,6 @@ _LINE_NOISE = (
 )
 _CLEAR_OF_TONE = 10.0  # bins on each side of a test tone and its harmonics: its skirts are 70 dB down there
 _NOISE_BELOW_HZ = 510.0  # the noise near the lines; they fill a tenth of these bins
-
-
-def line_shape(away: Precise) -> Precise:
-    """Hann spectrum of a line of height 1, `away` bins from it, phase referred to the middle (Harris 1978, eq. 27)."""
-    return np.asarray(np.sinc(away) + (np.sinc(away - 1) + np.sinc(away + 1)) / 2)
 
 
 @dataclass(frozen=True, slots=True)

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from monitord.blocks import Detected, Flags, Precise, Second
+from monitord.measure.hannline import between_bins, line_shape
 from monitord.quantities import Quantity
 from monitord.stage import Bank
 
@@ -39,11 +40,6 @@ _HANN_COVARIANCE = (
 
 Lines = NDArray[np.complex128]
 Bins = NDArray[np.int64]
-
-
-def line_shape(away: Precise) -> Precise:
-    """Hann spectrum of a line of height 1, `away` bins from it, phase referred to the middle (Harris 1978, eq. 27)."""
-    return np.asarray(np.sinc(away) + (np.sinc(away - 1) + np.sinc(away + 1)) / 2)
 
 
 def _from_middle(bins: Bins) -> Precise:
@@ -80,7 +76,7 @@ def _fit(second: Second, row: Bins, peak: Bins, noise: Precise) -> _Fit:
     """Least-squares fit of a line to the bins around each peak: two Gauss-Newton steps from an interpolation."""
     bins = peak[:, None] + np.arange(-_REACH, _REACH + 1)
     wave = second.audio[row[:, None], bins] * _from_middle(bins)
-    frequency = peak + _interpolated(np.abs(wave[:, _REACH - 1 : _REACH + 2]))
+    frequency = peak + between_bins(*np.abs(wave[:, _REACH - 1 : _REACH + 2]).T)[0]
     for _ in range(2):
         shape, line, rest = _explained(wave, bins, frequency)
         slope = line_shape(frequency[:, None] + 1e-4 - bins) - line_shape(frequency[:, None] - 1e-4 - bins)
@@ -97,13 +93,6 @@ def _fit(second: Second, row: Bins, peak: Bins, noise: Precise) -> _Fit:
 
 def _sum(values: Precise) -> Precise:
     return np.asarray(values.sum(axis=1))
-
-
-def _interpolated(three: Precise) -> Precise:
-    """Where between three Hann bins a line stands, from the middle one (Rife and Vincent 1970: (2 r - 1)/(r + 1))."""
-    upper = three[:, 2] > three[:, 0]
-    ratio = np.where(upper, three[:, 2], three[:, 0]) / three[:, 1]
-    return np.asarray(np.where(upper, 1, -1) * (2 * ratio - 1) / (ratio + 1))
 
 
 def _explained(wave: Lines, bins: Bins, frequency: Precise) -> tuple[Precise, Lines, Lines]:
