@@ -11,16 +11,14 @@ from monitord.measure.flattops import FlatTopMeter
 from monitord.measure.gainchange import GainChangeMeter
 from monitord.measure.hum import HumMeter
 from monitord.measure.ident import IdentMeter
-from monitord.measure.incidentalphase import IncidentalPhaseMeter
 from monitord.measure.interference import InterferenceMeter
 from monitord.measure.loudness import LoudnessMeter
 from monitord.measure.mask import EmissionMaskMeter
 from monitord.measure.modulation import ModulationMeter
 from monitord.measure.occupied import OccupiedBandwidthMeter
 from monitord.measure.pausenoise import PauseNoiseMeter
-from monitord.measure.quadraturesignal import QuadratureSignalMeter
+from monitord.measure.quadrature import QuadratureMeter
 from monitord.measure.sidebandbalance import SidebandBalanceMeter
-from monitord.measure.signaltonoise import SignalToNoiseMeter
 from monitord.measure.silence import SilenceMeter
 from monitord.measure.testtone import SteadyToneMeter
 from monitord.measure.tonedepth import ToneDepthMeter
@@ -38,8 +36,7 @@ METERS: tuple[type[Meter], ...] = (
     FlatTopMeter,
     SilenceMeter,
     AudioBandwidthMeter,
-    SignalToNoiseMeter,
-    IncidentalPhaseMeter,
+    QuadratureMeter,
     SidebandBalanceMeter,
     DisagreementMeter,
     CarrierShiftMeter,
@@ -47,7 +44,6 @@ METERS: tuple[type[Meter], ...] = (
     HumMeter,
     LoudnessMeter,
     InterferenceMeter,
-    QuadratureSignalMeter,
     GainChangeMeter,
     OccupiedBandwidthMeter,
     EmissionMaskMeter,

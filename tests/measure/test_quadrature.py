@@ -5,15 +5,14 @@ import pytest
 
 from monitord.measure.carriershift import CarrierShiftMeter
 from monitord.measure.disagreement import DisagreementMeter
-from monitord.measure.incidentalphase import IncidentalPhaseMeter
+from monitord.measure.quadrature import QuadratureMeter
 from monitord.measure.sidebandbalance import SidebandBalanceMeter
-from monitord.measure.signaltonoise import SignalToNoiseMeter
 from tests import signals
 from tests.runs import channel, run
 from tests.trials import bank_of, measured, programmes, received, times, tones
 
 ROWS, HOPS = 20, 50
-METERS = (IncidentalPhaseMeter, SidebandBalanceMeter, DisagreementMeter, SignalToNoiseMeter)
+METERS = (QuadratureMeter, SidebandBalanceMeter, DisagreementMeter)
 
 
 def last_of(name: str, envelope: np.ndarray, c_n0_dbhz: float, detector: str = "synchronous") -> np.ndarray:
