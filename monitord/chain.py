@@ -20,7 +20,7 @@ from monitord.blocks import Baseband, Block, Detected, Event, Fault, Moment, Pre
 from monitord.condition.tuner import Tuner
 from monitord.detect import DETECTORS
 from monitord.errors import ConfigError
-from monitord.measure import METERS, quantities_of
+from monitord.measure import JOINED, METERS, quantities_of
 from monitord.measure.validity import FaultJudge
 from monitord.notice import RULES
 from monitord.publish.tally import Tally
@@ -150,6 +150,8 @@ class _BankChain:
                 values |= meter.reading()
             except Exception as error:  # as above
                 self._failed(name, error)
+        for join in JOINED:
+            values |= join(self.bank, values)
         return values
 
     def _failed(self, name: str, error: Exception) -> None:

@@ -1,10 +1,12 @@
 """From detected hops to Moments and Readings. A new meter is one file here and one name in `METERS`."""
 
-from collections.abc import Sequence
+from collections.abc import Callable, Mapping, Sequence
 
+from monitord.blocks import Precise
 from monitord.measure.audiobandwidth import AudioBandwidthMeter
 from monitord.measure.carrier import CarrierMeter
 from monitord.measure.carriershift import CarrierShiftMeter
+from monitord.measure.cochannel import level_uncertainty
 from monitord.measure.disagreement import DisagreementMeter
 from monitord.measure.excursions import ExcursionMeter
 from monitord.measure.flattops import FlatTopMeter
@@ -24,7 +26,7 @@ from monitord.measure.testtone import SteadyToneMeter
 from monitord.measure.tonedepth import ToneDepthMeter
 from monitord.quantities import Quantity
 from monitord.settings import Channel
-from monitord.stage import Meter
+from monitord.stage import Bank, Meter
 
 METERS: tuple[type[Meter], ...] = (
     CarrierMeter,
@@ -48,6 +50,9 @@ METERS: tuple[type[Meter], ...] = (
     OccupiedBandwidthMeter,
     EmissionMaskMeter,
 )
+
+JOINED: tuple[Callable[[Bank, Mapping[str, Precise]], Mapping[str, Precise]], ...] = (level_uncertainty,)
+"""What rests on quantities of more than one meter: functions of a reading's values that give some of them anew."""
 
 
 def quantities_of(
