@@ -59,19 +59,34 @@ def _column(quantity: Quantity) -> _Column:
     )
 
 
+COLUMNS = (
+    *(
+        "carrier_present",
+        "carrier_level_dbfs",
+        "carrier_frequency_offset_hertz",
+        "carrier_to_noise_density_dbhz",
+    ),
+    *("modulation_positive_peak_ratio", "modulation_negative_peak_ratio", "modulation_rms_ratio"),
+    *(
+        "audio_signal_to_noise_db",
+        "audio_loudness_short_term_lufs",
+        "audio_silent",
+        "audio_tone_hertz",
+        "audio_thd_ratio",
+    ),
+)
+"""What a person reads in one line; all quantities are in the other formats."""
+
+
 class Table:
     """Aligned columns with their units, ratios in per cent, events as lines of their own.
 
-    To fit a screen it leaves out uncertainties and quantities with a second label; CSV and JSON have them.
+    To fit a screen it has the quantities of `COLUMNS` only; CSV and JSON have all of them.
     """
 
     def __init__(self, quantities: Sequence[Quantity], out: TextIO) -> None:
         """Write to `out`; the heading comes with the first reading."""
-        self._columns = [
-            _column(quantity)
-            for quantity in quantities
-            if not quantity.label and "uncertainty" not in quantity.name
-        ]
+        self._columns = [_column(quantity) for quantity in quantities if quantity.name in COLUMNS]
         self._out = out
         self._events = OpenEvents()
         self._timed = False
