@@ -6,10 +6,11 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from monitord.blocks import Block, Event, Moment, Reading
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.notice import RULES
 from monitord.publish.tally import Tally
 from monitord.settings import Channel
+from monitord.stream import Stream
 
 
 @dataclass

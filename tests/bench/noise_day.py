@@ -11,10 +11,11 @@ import time
 import numpy as np
 
 from monitord.blocks import Block, Event, Moment, Reading
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.notice import RULES
 from monitord.publish.tally import Tally
 from monitord.settings import Channel
+from monitord.stream import Stream
 
 RATE_HZ = 8_000.0
 BLOCK = 16_000

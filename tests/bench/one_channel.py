@@ -13,13 +13,14 @@ import numpy as np
 import scipy.fft
 
 from monitord.blocks import Baseband, Block, Span
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.condition.grid import Branch, Grid
 from monitord.detect import DETECTORS
 from monitord.measure import METERS
 from monitord.notice import RULES
 from monitord.publish.tally import Tally
 from monitord.settings import Channel
+from monitord.stream import Stream
 from tests.station import daemon, publisher, send_in_real_time, subscribed
 from tests.trials import bank_of, received, tones
 

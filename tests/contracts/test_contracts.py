@@ -10,11 +10,12 @@ import numpy as np
 import pytest
 
 from monitord.blocks import Detected
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.condition.tuner import Tuner
 from monitord.detect import DETECTORS
 from monitord.measure import METERS
 from monitord.notice import RULES
+from monitord.stream import Stream
 from tests.contracts.streams import CHANNELS, RATE_HZ, bank, blocks, hops, stream
 from tests.runs import Kept
 

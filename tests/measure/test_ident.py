@@ -4,8 +4,9 @@ import numpy as np
 import pytest
 
 from monitord.blocks import Block
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.settings import Channel, Ident
+from monitord.stream import Stream
 from tests import keyer, signals
 from tests.runs import Kept, channel, run
 

@@ -9,10 +9,11 @@ import numpy as np
 import pytest
 import soundfile
 
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.measure import METERS
 from monitord.measure.quasipeak import QuasiPeakMeter
 from monitord.measure.weighting import bs468_weighting, quasi_peak
+from monitord.stream import Stream
 from tests import signals
 from tests.contracts import test_contracts as contracts
 from tests.contracts.streams import blocks

@@ -3,9 +3,10 @@
 import numpy as np
 
 from monitord.blocks import Block
-from monitord.chain import Chain, Stream
+from monitord.chain import Chain
 from monitord.notice import RULES
 from monitord.notice.source import SourceRule
+from monitord.stream import Stream
 from tests import signals
 from tests.runs import Kept, channel, run
 
