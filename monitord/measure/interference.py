@@ -25,6 +25,7 @@ SECONDS = 10
 _NEAR_HZ, _NEAREST_HZ, _FAST_FROM_HZ = 20.0, 0.3, 4.0
 _SLOW_PARTS = 4  # of a hop: 40 points a second
 _SLOW_HOPS = 600
+_STEADY = 1.7  # largest over smallest level in that minute: beyond, it fades, and fading has lines of its own
 _LEAST_DB = -52.0
 _CLEAR_AVERAGED, _CLEAR_SINGLE = 8.0, 40.0  # times the median of the bins around: never by noise in a year
 _AROUND = 40  # bins on each side
@@ -140,6 +141,7 @@ class _Near:
         self._wave: NDArray[np.complex128] = np.full((count, points), np.nan, np.complex128)
         self._bin_hz = 1 / (_SLOW_HOPS * bank.hop_s)
         self._part_s = bank.hop_s / _SLOW_PARTS
+        self._level = np.full((_SLOW_HOPS, count), np.nan)
         self._hops = 0
         hz = np.arange(points // 2 + 1) * self._bin_hz
         first, last = int(_NEAREST_HZ / self._bin_hz), int(_NEAR_HZ / self._bin_hz)
@@ -156,6 +158,7 @@ class _Near:
         self._wave[:, :-_SLOW_PARTS] = self._wave[:, _SLOW_PARTS:]
         usable = detected.settled & ~detected.broken
         self._wave[:, -_SLOW_PARTS:] = np.where(usable[:, None], parts, np.nan)
+        self._level[self._hops % _SLOW_HOPS] = detected.brief_amplitude
         self._hops += 1
         if self._hops % (10 * SECONDS):
             return None
@@ -164,7 +167,8 @@ class _Near:
         both = self._wave - mean
         in_phase = scipy.fft.rfft(both.real * window, axis=1)[:, self._bins] / self._droop
         quadrature = scipy.fft.rfft(both.imag * window, axis=1)[:, self._bins] / self._droop / self._left
-        known = np.isfinite(in_phase[:, :1])
+        steady = np.fmax.reduce(self._level) < _STEADY * np.fmin.reduce(self._level)
+        known = np.isfinite(in_phase[:, :1]) & steady[:, None]
         seen = _Spectra.of(np.where(known, in_phase, 0), np.where(known, quadrature, 0))
         offset_hz, amplitude = lines(seen, np.ones(len(mean)), self._bin_hz, _CLEAR_SINGLE)
         return offset_hz + np.sign(offset_hz) * self._first * self._bin_hz, amplitude
