@@ -9,8 +9,11 @@ bandwidth B_L = (wn/2)(zeta + 1/(4 zeta)), one-sided, Hz (Gardner, Phaselock Tec
 """
 
 import numpy as np
+from numpy.typing import NDArray
 
 from monitord.blocks import Precise
+
+Complex128 = NDArray[np.complex128]
 
 ZETA = 1 / np.sqrt(2)
 
@@ -18,6 +21,21 @@ ZETA = 1 / np.sqrt(2)
 def natural_frequency(loop_bandwidth_hz: float) -> float:
     """wn in rad/s of a loop of noise bandwidth B_L, damping 1/sqrt(2): wn = 2 B_L / (zeta + 1/(4 zeta))."""
     return float(2 * loop_bandwidth_hz / (ZETA + 1 / (4 * ZETA)))
+
+
+def loop_response(frequency_hz: Precise, loop_bandwidth_hz: float, step_s: float) -> Complex128:
+    """H(f): how much of a phase that swings at f the samples are turned by, complex128, shape of `frequency_hz`.
+
+    The recursion above in z = exp(j 2 pi f T): with A = a(z), E = e(z) and the loop's gains g1 = (wn T)^2 and
+    g2 = 2 zeta wn T, P = E (g1 z / (z-1)^2 + g2 / (z-1)) and A = E + P + E g1 / (2 (z-1)). Samples are turned by the
+    mean of P at a step's two edges, and a is a mean over the step. What stands in quadrature behind the loop is
+    1 - H of what came: below wn it falls with f^2. Not for 0 Hz, where H = 1.
+    """
+    turn = natural_frequency(loop_bandwidth_hz) * step_s
+    z = np.exp(2j * np.pi * frequency_hz * step_s)
+    held = turn**2 / (z - 1)
+    phase = held * z / (z - 1) + 2 * ZETA * turn / (z - 1)
+    return np.asarray(np.sinc(frequency_hz * step_s) * phase * (1 + z) / 2 / (1 + phase + held / 2))
 
 
 class CarrierLoop:
